@@ -1,0 +1,13 @@
+//! Alarms: the state machine of IEC 62682, the delays and deadbands that lead to it, and the one table of conditions.
+//!
+//! Pure: it is told the time and the figures, and says what changed. Adding a condition touches `conditions.rs`
+//! alone.
+
+mod record;
+mod state;
+
+pub use record::{
+    AlarmKey, AlarmRecord, Delivery, Facts, JournalEntry, Notice, NoticeKind, Outcome, Priority, Request,
+    RequestAction,
+};
+pub use state::{Event, State};

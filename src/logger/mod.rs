@@ -1,0 +1,72 @@
+//! Loggers: from bytes on a serial line to samples.
+//!
+//! A thread of its own reads each port and hands bytes with their arrival time to a decoder; what comes out, one
+//! [`FromLogger`] after the other over a bounded channel, is all that the rest of the house sees.
+
+use crate::quantity::Moment;
+
+/// What a logger has to say, in the order in which it happened.
+#[derive(Clone, Debug, PartialEq)]
+pub struct FromLogger {
+    /// Index into [`crate::config::Site::loggers`].
+    pub logger: usize,
+    /// When its last byte arrived.
+    pub received: Moment,
+    /// What.
+    pub what: LoggerEvent,
+}
+
+/// One thing that a logger said, or that happened to its line.
+#[derive(Clone, Debug, PartialEq)]
+pub enum LoggerEvent {
+    /// A good line.
+    Sample(Sample),
+    /// A line, or bytes between lines, that could not be used.
+    Fault(LineFault),
+    /// Good lines are missing before the next sample, by their sequence numbers.
+    Lost {
+        /// How many.
+        lines: u32,
+    },
+    /// The logger started again: its sequence and its milliseconds begin anew.
+    Restarted,
+    /// The port opened.
+    Connected {
+        /// Which port, by its resolved path.
+        port: String,
+    },
+    /// The port could not be opened, or was lost; it's tried again after a back-off.
+    Disconnected {
+        /// One sentence that says what to do.
+        why: String,
+    },
+    /// A read has not returned for too long: driver or adapter hangs.
+    ReadHangs,
+}
+
+/// One line of a logger: values of its channels at one time.
+#[derive(Clone, Debug, PartialEq)]
+pub struct Sample {
+    /// The logger's own milliseconds, if it has them: they run evenly, from an unknown start.
+    pub logger_ms: Option<u64>,
+    /// (index of the channel within its logger, raw volts), uncalibrated.
+    pub values: Vec<(usize, f64)>,
+}
+
+/// Why bytes could not be used; counted by reason.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, PartialOrd, Ord, Hash, serde::Serialize, serde::Deserialize)]
+#[serde(rename_all = "snake_case")]
+pub enum LineFault {
+    /// Bytes that are no line.
+    Garbage,
+    /// Longer than a line may be.
+    TooLong,
+    /// The check sum is wrong.
+    Checksum,
+    /// The check sum is right, the rest isn't a line of the format.
+    Malformed,
+    /// A channel that the config doesn't name; the line's other channels are kept.
+    UnknownChannel,
+    /// Not a number, infinite, or beyond what can be stored; the line's other channels are kept.
+    BadValue,
+}
