@@ -29,3 +29,4 @@ pub mod logger;
 pub mod quantity;
 pub mod reading;
 pub mod supply;
+pub mod watch;

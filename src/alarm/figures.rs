@@ -57,8 +57,12 @@ pub struct RailFigures {
 }
 
 impl RailFigures {
-    /// `hall.reservoir`
+    /// `hall.reservoir`, or `hall.reservoir.full` where the limit is judged at another loading than idle: what the
+    /// alarm is about, so that two limits on one rail are two alarms.
     pub fn subject(&self) -> String {
-        format!("{}.{}", self.amplifier, self.node)
+        match self.loading {
+            Loading::Idle => format!("{}.{}", self.amplifier, self.node),
+            other => format!("{}.{}.{}", self.amplifier, self.node, other.word()),
+        }
     }
 }
