@@ -9,7 +9,7 @@
 
 use std::collections::HashMap;
 
-use crate::quantity::{Moment, Utc};
+use crate::quantity::{Moment, Mono, Utc};
 use crate::reading::Stamp;
 
 /// Differences between UTC and monotonic time up to this are slewing, not a step, ms.
@@ -74,6 +74,11 @@ impl TimeBase {
         self.offset_ms - self.host_offset_ms >= STEP_MS
     }
 
+    /// UTC at a monotonic time, as readings are labelled.
+    pub fn utc(&self, mono: Mono) -> Utc {
+        Utc(mono.0 as i64 + self.offset_ms)
+    }
+
     /// The time of a line of `logger` that arrived at `received`.
     pub fn stamp(&mut self, logger: usize, received: Moment, logger_ms: Option<u64>) -> Stamp {
         let arrival_ms = received.mono.0 as i64;
@@ -120,7 +125,6 @@ fn offset(now: Moment) -> i64 {
 #[cfg(test)]
 mod tests {
     use super::*;
-    use crate::quantity::Mono;
 
     const START: i64 = 1_790_000_000_000;
 

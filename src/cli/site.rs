@@ -1,0 +1,56 @@
+//! Finding and reading the config file, and opening the record that it names.
+
+use std::path::{Path, PathBuf};
+
+use anyhow::{Context, bail};
+use etcetera::BaseStrategy;
+
+use crate::alarm::CONDITIONS;
+use crate::config::Site;
+use crate::store::Store;
+use crate::watch::{RailWatch, projector, rail_watches};
+
+/// Reads the config: the given file, or the first that exists of those that `--help` names.
+pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
+    let file = match given {
+        Some(file) => file,
+        None => find()?,
+    };
+    let text = std::fs::read_to_string(&file)
+        .with_context(|| format!("the config file {} can't be read", file.display()))?;
+    let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
+    Site::parse(&text, &file, &conditions).map_err(|complaints| anyhow::anyhow!("{complaints}"))
+}
+
+/// The record of a site, to read from; a sentence that helps where there's none yet.
+pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
+    let path = &site.store.path;
+    if !path.exists() {
+        bail!("there is no record at {} yet; `railtide run` begins one", path.display());
+    }
+    Ok(Store::open_read_only(path)?)
+}
+
+/// Every limit of the site with its projection.
+pub(super) fn rails(site: &Site) -> Vec<RailWatch> {
+    let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
+    rail_watches(site, &projectors)
+}
+
+fn find() -> anyhow::Result<PathBuf> {
+    let mut places = vec![PathBuf::from("railtide.toml")];
+    if let Ok(user) = etcetera::choose_base_strategy() {
+        places.push(user.config_dir().join("railtide/railtide.toml"));
+    }
+    places.push(Path::new("/etc/railtide/railtide.toml").to_owned());
+    match places.iter().find(|place| place.exists()) {
+        Some(place) => Ok(place.clone()),
+        None => {
+            let looked: Vec<_> = places.iter().map(|p| p.display().to_string()).collect();
+            bail!(
+                "no config file: looked for {}; name one with --config, or copy config/railtide.example.toml",
+                looked.join(", ")
+            )
+        }
+    }
+}

@@ -1,0 +1,125 @@
+//! The daemon: starts the loggers' threads, the notice worker and the walk, joins them, stops them.
+//!
+//! One task walks every reading through the house ([`walk`]): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
+//! ─▶ notice. Loggers and the notice worker speak to it over bounded channels and know nothing of one another.
+
+mod alone;
+mod held;
+mod hush;
+mod walk;
+
+use std::future::Future;
+use std::time::Duration;
+
+use tokio::sync::{mpsc, watch as signal};
+
+use crate::clock::{Clock, TimeBase};
+use crate::config::Site;
+use crate::logger;
+use crate::notice::{NoticeError, Worker};
+use crate::store::{ChannelSpec, Lock, Store, StoreError};
+use crate::supply::Projector;
+use crate::watch::{Watch, projector};
+
+pub use alone::apply_alone;
+
+use walk::Walk;
+
+/// Delays are looked at this often when no reading comes.
+const TICK: Duration = Duration::from_millis(250);
+
+/// Events that may wait for the walk: beyond that a logger's thread waits, and the kernel's buffer takes the rest.
+const LOGGER_QUEUE: usize = 4_096;
+
+/// The notice worker gets this long to finish a delivery when the daemon stops.
+const STOP_NOTICES: Duration = Duration::from_secs(3);
+
+/// Why the daemon couldn't start.
+#[derive(Debug, thiserror::Error)]
+pub enum DaemonError {
+    /// The record couldn't be opened, or another instance holds it.
+    #[error(transparent)]
+    Store(#[from] StoreError),
+    /// A receiver couldn't be set up.
+    #[error(transparent)]
+    Notice(#[from] NoticeError),
+    /// The config names no logger, so there is nothing to read.
+    #[error("the config names no [[logger]], so there is nothing to run; add one, or use the commands that need none")]
+    NoLogger,
+}
+
+/// Runs the site until `shutdown` is ready, then commits what is held and stops everything it started.
+///
+/// Commits happen on the task that calls this: let a runtime's main task call it, so that a slow card holds up nobody
+/// else.
+pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) -> Result<(), DaemonError> {
+    if site.loggers.is_empty() {
+        return Err(DaemonError::NoLogger);
+    }
+    let _lock = Lock::take(&site.store.path)?;
+    let mut store = Store::open(&site.store.path)?;
+    let ids = store.register_channels(&channel_specs(site))?;
+    let restored = store.restore()?;
+    let now = clock.now();
+    let watch = Watch::new(site, &ids, &projectors(site), restored.watch, now);
+    let time = TimeBase::new(now, restored.newest_reading);
+
+    let (outcome_tx, mut outcomes) = mpsc::channel(64);
+    let worker = Worker::spawn(&site.receivers, site.time_zone, clock.clone(), outcome_tx)?;
+    worker.send(restored.undelivered);
+
+    let (stop_tx, stop_rx) = signal::channel(false);
+    let (event_tx, mut events) = mpsc::channel(LOGGER_QUEUE);
+    let ports: Vec<_> = site
+        .loggers
+        .iter()
+        .enumerate()
+        .map(|(i, settings)| logger::spawn(i, settings, clock.clone(), event_tx.clone(), stop_rx.clone()))
+        .collect();
+    drop(event_tx);
+    tracing::info!(database = %site.store.path.display(), "railtide is watching {}", site.name);
+
+    let mut walk = Walk::new(site, clock.clone(), time, watch, store, worker);
+    tokio::pin!(shutdown);
+    let mut next_tick = now.mono + TICK;
+    loop {
+        tokio::select! {
+            biased;
+            () = &mut shutdown => break,
+            Some(outcome) = outcomes.recv() => walk.outcome(outcome),
+            () = clock.sleep_until(next_tick) => {
+                walk.tick();
+                next_tick = clock.now().mono + TICK;
+            }
+            Some(event) = events.recv() => walk.from_logger(event),
+        }
+    }
+
+    tracing::info!("stopping: committing what is held");
+    // Nobody listens any more: a receiver that hung up would only be told so.
+    let _ = stop_tx.send(true);
+    while let Some(event) = events.recv().await {
+        walk.from_logger(event);
+    }
+    for port in ports {
+        port.join().await;
+    }
+    let (mut held, mut store, worker) = walk.finish();
+    worker.stop(STOP_NOTICES).await;
+    while let Ok(outcome) = outcomes.try_recv() {
+        held.add_outcome(outcome);
+    }
+    if !held.is_empty() {
+        held.commit(&mut store)?;
+    }
+    tracing::info!("stopped");
+    Ok(())
+}
+
+fn projectors(site: &Site) -> Vec<Option<Projector>> {
+    site.amplifiers.iter().map(projector).collect()
+}
+
+fn channel_specs(site: &Site) -> Vec<ChannelSpec> {
+    site.channels().map(|(_, channel)| ChannelSpec::from(channel)).collect()
+}
