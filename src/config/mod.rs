@@ -1,8 +1,27 @@
 //! The config file: TOML into checked types, and every complaint with its line and what would be right.
+//!
+//! The raw file is a tree of values that know their place in the text (`table`); reading it either gives a [`Site`],
+//! which cannot hold a bad value, or [`Complaints`], all mistakes of the file at once. What is possible but unlikely
+//! comes as [`Site::warnings`]. Values of one kind of part (rectifiers, output valves) are data in the top-level
+//! `config/` folder.
+//!
+//! Pure but for [`Site::load`], which reads the one file that it's given.
 
+mod amplifier;
+mod complaint;
+mod logger;
+mod nearest;
+mod notices;
+mod parse;
+mod references;
+mod secret;
 mod site;
+mod table;
 
+pub use complaint::{Complaint, Complaints, Place};
+pub use parse::Surroundings;
+pub use secret::SecretSource;
 pub use site::{
-    AlarmOverride, Amplifier, Channel, Limit, LoggerSettings, MeasuredSupply, RailOf, Rating, Receiver,
-    Route, Site, StoreSettings,
+    AlarmOverride, Amplifier, Bias, BiasFrom, Channel, ColdStart, DayWindow, Limit, LoggerSettings,
+    MeasuredSupply, OutputStage, RailOf, Rating, Receiver, Route, ServiceEvent, Site, Standby, StoreSettings,
 };
