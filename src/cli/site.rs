@@ -6,7 +6,7 @@ use anyhow::{Context, bail};
 use etcetera::BaseStrategy;
 
 use crate::alarm::CONDITIONS;
-use crate::config::Site;
+use crate::config::{Site, Surroundings};
 use crate::store::Store;
 use crate::watch::{RailWatch, projector, rail_watches};
 
@@ -16,10 +16,19 @@ pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
         Some(file) => file,
         None => find()?,
     };
-    let text = std::fs::read_to_string(&file)
-        .with_context(|| format!("the config file {} can't be read", file.display()))?;
+    let bytes =
+        std::fs::read(&file).with_context(|| format!("the config file {} can't be read", file.display()))?;
     let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
-    Site::parse(&text, &file, &conditions).map_err(|complaints| anyhow::anyhow!("{complaints}"))
+    let surroundings = Surroundings { conditions: &conditions, default_store: default_store() };
+    Site::parse_bytes(&bytes, &file, &surroundings).map_err(|complaints| {
+        anyhow::anyhow!("the config has mistakes, and nothing was done:\n{complaints}")
+    })
+}
+
+/// Where the record is when `[store]` names no path: the user's data folder.
+fn default_store() -> PathBuf {
+    etcetera::choose_base_strategy()
+        .map_or_else(|_| PathBuf::from("railtide.db"), |user| user.data_dir().join("railtide/railtide.db"))
 }
 
 /// The record of a site, to read from; a sentence that helps where there's none yet.
