@@ -21,6 +21,7 @@
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
 //! | [`config`] | the TOML file into checked types | yes |
 //! | [`clock`] | the only place that reads a clock | no |
+//! | [`store`] | the record: SQLite, blocks of readings, intervals, alarms, outbox, requests | no |
 
 pub mod alarm;
 pub mod clock;
@@ -28,5 +29,6 @@ pub mod config;
 pub mod logger;
 pub mod quantity;
 pub mod reading;
+pub mod store;
 pub mod supply;
 pub mod watch;
