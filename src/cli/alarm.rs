@@ -102,14 +102,19 @@ fn ask(site: &Site, request: &Request) -> anyhow::Result<Answer> {
 }
 
 fn ask_daemon(site: &Site, request: &Request) -> anyhow::Result<Answer> {
-    let mut store = Store::open(&site.store.path)?;
+    let mut store = Store::open_beside(&site.store.path)?;
     let id = store.put_request(request, Clock::system().now().utc)?;
     let asked = Instant::now();
     while asked.elapsed() < ANSWER_WITHIN {
         if let Some(answer) = store.answer(id)? {
-            return Ok(answer);
+            return Ok(Answer { done: answer.ok, text: answer.said });
         }
         std::thread::sleep(LOOK_EVERY);
     }
-    None.context("the daemon has not answered within 5 s; it will still do it when it can (see its log)")
+    // The daemon may have done it in the meantime; if not, it must not do it after we said that it wasn't done.
+    if store.withdraw_request(id)? {
+        bail!("the daemon has not answered within 5 s, and nothing was done; look at its log");
+    }
+    let answer = store.answer(id)?.context("the request is gone from the record")?;
+    Ok(Answer { done: answer.ok, text: answer.said })
 }

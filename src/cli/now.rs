@@ -29,7 +29,14 @@ impl Now {
         let site = super::site::load(config)?;
         let store = super::site::open_record(&site)?;
         let now = Clock::system().now().utc;
-        let latest = store.latest_readings(site.channels().map(|(_, c)| c.name.as_str()))?;
+        let stored = store.channels()?;
+        let latest = site
+            .channels()
+            .map(|(_, channel)| match stored.iter().find(|s| s.name == channel.name) {
+                Some(known) => store.latest_reading(known.id),
+                None => Ok(None),
+            })
+            .collect::<Result<Vec<_>, _>>()?;
         let standing = Standing::new(&site, &super::site::rails(&site), &latest, now);
         let alarms = AlarmList::new(&store.alarms()?, false, site.time_zone, now);
         match self.format {

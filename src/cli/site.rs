@@ -33,11 +33,7 @@ fn default_store() -> PathBuf {
 
 /// The record of a site, to read from; a sentence that helps where there's none yet.
 pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
-    let path = &site.store.path;
-    if !path.exists() {
-        bail!("there is no record at {} yet; `railtide run` begins one", path.display());
-    }
-    Ok(Store::open_read_only(path)?)
+    Ok(Store::open_read_only(&site.store.path)?)
 }
 
 /// Every limit of the site with its projection.

@@ -2,17 +2,16 @@
 
 use crate::clock::Clock;
 use crate::config::Site;
-use crate::store::{Batch, Lock, Store, StoreError};
+use crate::store::{Batch, Lock, OpenOptions, Store, StoreError};
 use crate::alarm::Request;
 use crate::watch::{Answer, Watch};
 
 /// Applies one request through [`Watch`] and commits it. Its notices wait in the outbox for the next run.
 pub fn apply_alone(site: &Site, _lock: &Lock, clock: Clock, request: &Request) -> Result<Answer, StoreError> {
-    let mut store = Store::open(&site.store.path)?;
+    let mut store = Store::open(&site.store.path, &OpenOptions::default())?;
     let ids = store.register_channels(&super::channel_specs(site))?;
-    let restored = store.restore()?;
     let now = clock.now();
-    let mut watch = Watch::new(site, &ids, &super::projectors(site), restored.watch, now);
+    let mut watch = Watch::new(site, &ids, &super::projectors(site), super::remembered(&store)?.0, now);
     let (decided, answer) = watch.request(request, now);
     store.commit(&Batch {
         alarms: decided.alarms,

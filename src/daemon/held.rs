@@ -1,8 +1,8 @@
 //! What has been decided but isn't in the record yet: kept in bounded memory until a commit succeeds.
 
 use crate::alarm::{Notice, Outcome};
-use crate::store::{Batch, Store, StoreError};
-use crate::watch::{Answer, Decided};
+use crate::store::{Answer, Batch, Store, StoreError};
+use crate::watch::Decided;
 
 /// More readings than this are not held: two channels at 1 Hz for about two and a half days (24 bytes each).
 const MOST_READINGS: usize = 500_000;
@@ -36,7 +36,7 @@ impl Held {
     }
 
     /// Adds the answer to a request.
-    pub(super) fn add_answer(&mut self, request: i64, answer: Answer) {
+    pub(super) fn add_answer(&mut self, request: u64, answer: Answer) {
         self.batch.answers.push((request, answer));
     }
 

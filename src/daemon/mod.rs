@@ -11,15 +11,15 @@ mod walk;
 use std::future::Future;
 use std::time::Duration;
 
-use tokio::sync::{mpsc, watch as signal};
+use tokio::sync::{mpsc, watch as flag};
 
 use crate::clock::{Clock, TimeBase};
 use crate::config::Site;
 use crate::logger;
 use crate::notice::{NoticeError, Worker};
-use crate::store::{ChannelSpec, Lock, Store, StoreError};
+use crate::store::{self, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
-use crate::watch::{Watch, projector};
+use crate::watch::{self, Watch, projector};
 
 pub use alone::apply_alone;
 
@@ -57,18 +57,18 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
         return Err(DaemonError::NoLogger);
     }
     let _lock = Lock::take(&site.store.path)?;
-    let mut store = Store::open(&site.store.path)?;
+    let mut store = Store::open(&site.store.path, &OpenOptions::default())?;
     let ids = store.register_channels(&channel_specs(site))?;
-    let restored = store.restore()?;
+    let (remembered, restored) = remembered(&store)?;
     let now = clock.now();
-    let watch = Watch::new(site, &ids, &projectors(site), restored.watch, now);
-    let time = TimeBase::new(now, restored.newest_reading);
+    let watch = Watch::new(site, &ids, &projectors(site), remembered, now);
+    let time = TimeBase::new(now, restored.newest);
 
     let (outcome_tx, mut outcomes) = mpsc::channel(64);
     let worker = Worker::spawn(&site.receivers, site.time_zone, clock.clone(), outcome_tx)?;
-    worker.send(restored.undelivered);
+    worker.send(restored.undelivered.into_iter().map(Waiting::again).collect());
 
-    let (stop_tx, stop_rx) = signal::channel(false);
+    let (stop_tx, stop_rx) = flag::channel(false);
     let (event_tx, mut events) = mpsc::channel(LOGGER_QUEUE);
     let ports: Vec<_> = site
         .loggers
@@ -120,6 +120,27 @@ fn projectors(site: &Site) -> Vec<Option<Projector>> {
     site.amplifiers.iter().map(projector).collect()
 }
 
+/// What the record remembers, for the watch and for the rest.
+fn remembered(store: &Store) -> Result<(watch::Restored, store::Restored), StoreError> {
+    let mut restored = store.restore()?;
+    let for_watch = watch::Restored {
+        alarms: std::mem::take(&mut restored.alarms),
+        next_seq: restored.next_seq,
+        next_notice_id: restored.next_notice_id,
+        database_id: store.database_id()?,
+    };
+    Ok((for_watch, restored))
+}
+
 fn channel_specs(site: &Site) -> Vec<ChannelSpec> {
-    site.channels().map(|(_, channel)| ChannelSpec::from(channel)).collect()
+    site.channels()
+        .map(|(_, channel)| ChannelSpec {
+            name: channel.name.clone(),
+            was: channel.was.clone(),
+            quantity: channel.quantity,
+            sample_period_ms: channel.sample_period.as_millis() as u32,
+            amplifier: channel.rail.as_ref().map(|rail| rail.amplifier.clone()),
+            node: channel.rail.as_ref().map(|rail| rail.node.clone()),
+        })
+        .collect()
 }

@@ -8,7 +8,7 @@ use crate::config::Site;
 use crate::logger::{FromLogger, LoggerEvent};
 use crate::notice::{Waiting, WorkerHandle};
 use crate::quantity::{Moment, Mono};
-use crate::store::{Store, StoreError};
+use crate::store::{Answer, PendingRequest, Store, StoreError};
 use crate::watch::{Decided, Watch};
 
 use super::held::Held;
@@ -29,6 +29,8 @@ pub(super) struct Walk {
     commit_every: Duration,
     commit_at: Mono,
     store_failed: bool,
+    /// True until requests that were put before the start have been looked for.
+    requests_unread: bool,
     hush: Hush,
 }
 
@@ -53,6 +55,7 @@ impl Walk {
             commit_every: site.store.commit_every,
             commit_at,
             store_failed: false,
+            requests_unread: true,
             hush: Hush::default(),
         }
     }
@@ -160,17 +163,25 @@ impl Walk {
     }
 
     fn answer_requests(&mut self, now: Moment) {
-        let requests = match self.store.new_requests() {
+        let requests = match self.new_requests() {
             Ok(requests) => requests,
             Err(error) => return self.log_store_failure(&error, now.mono),
         };
-        for (id, request) in requests {
+        for PendingRequest { id, request, .. } in requests {
             let (decided, answer) = self.watch.request(&request, now);
             tracing::info!(by = request.by, done = answer.done, "{}", answer.text);
-            self.held.add_answer(id, answer);
+            self.held.add_answer(id, Answer { done_at: now.utc, ok: answer.done, said: answer.text });
             self.settle(decided);
             self.commit();
         }
+    }
+
+    fn new_requests(&mut self) -> Result<Vec<PendingRequest>, StoreError> {
+        let unread = self.store.changed_by_others()? || self.requests_unread;
+        self.requests_unread = unread;
+        let requests = if unread { self.store.pending_requests()? } else { Vec::new() };
+        self.requests_unread = false;
+        Ok(requests)
     }
 
     fn look_at_the_clock(&mut self, now: Moment) {
