@@ -20,12 +20,16 @@
 //! | [`supply`] | from mains to every rail | yes |
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
 //! | [`config`] | the TOML file into checked types | yes |
+//! | [`report`] | how each result is said and drawn | yes |
 //! | [`clock`] | the only place that reads a clock | no |
+//! | [`notice`] | delivers notices to receivers | no |
 
 pub mod alarm;
 pub mod clock;
 pub mod config;
 pub mod logger;
+pub mod notice;
 pub mod quantity;
 pub mod reading;
+pub mod report;
 pub mod supply;

@@ -4,5 +4,5 @@ mod site;
 
 pub use site::{
     AlarmOverride, Amplifier, Channel, Limit, LoggerSettings, MeasuredSupply, RailOf, Rating, Receiver,
-    Route, Site, StoreSettings,
+    Route, SecretSource, Site, StoreSettings,
 };

@@ -4,7 +4,6 @@ use std::path::PathBuf;
 use std::time::Duration;
 
 use chrono_tz::Tz;
-use secrecy::SecretString;
 
 use crate::alarm::Priority;
 use crate::reading::ChannelQuantity;
@@ -201,7 +200,16 @@ pub enum Route {
     Webhook {
         /// `http://` or `https://`.
         url: String,
-        /// Sent as `Authorization: Bearer …`, from a file or an environment variable.
-        token: Option<SecretString>,
+        /// Sent as `Authorization: Bearer …`.
+        token: Option<SecretSource>,
     },
+}
+
+/// Where a secret is read from when the daemon starts; the config file itself never holds one.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub enum SecretSource {
+    /// A file that holds the secret and nothing else.
+    File(PathBuf),
+    /// The name of an environment variable.
+    Env(String),
 }
