@@ -16,7 +16,7 @@ use tokio::sync::{mpsc, watch as flag};
 use crate::clock::{Clock, TimeBase};
 use crate::config::Site;
 use crate::logger;
-use crate::notice::{NoticeError, Worker};
+use crate::notice::{NoticeError, Waiting, Worker};
 use crate::store::{self, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
 use crate::watch::{self, Watch, projector};
@@ -30,9 +30,6 @@ const TICK: Duration = Duration::from_millis(250);
 
 /// Events that may wait for the walk: beyond that a logger's thread waits, and the kernel's buffer takes the rest.
 const LOGGER_QUEUE: usize = 4_096;
-
-/// The notice worker gets this long to finish a delivery when the daemon stops.
-const STOP_NOTICES: Duration = Duration::from_secs(3);
 
 /// Why the daemon couldn't start.
 #[derive(Debug, thiserror::Error)]
@@ -65,8 +62,8 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let time = TimeBase::new(now, restored.newest);
 
     let (outcome_tx, mut outcomes) = mpsc::channel(64);
-    let worker = Worker::spawn(&site.receivers, site.time_zone, clock.clone(), outcome_tx)?;
-    worker.send(restored.undelivered.into_iter().map(Waiting::again).collect());
+    let worker = Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcome_tx)?;
+    worker.send(restored.undelivered.into_iter().map(waiting_again).collect());
 
     let (stop_tx, stop_rx) = flag::channel(false);
     let (event_tx, mut events) = mpsc::channel(LOGGER_QUEUE);
@@ -105,7 +102,15 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
         port.join().await;
     }
     let (mut held, mut store, worker) = walk.finish();
-    worker.stop(STOP_NOTICES).await;
+    let stopped = worker.stop();
+    tokio::pin!(stopped);
+    loop {
+        tokio::select! {
+            biased;
+            Some(outcome) = outcomes.recv() => held.add_outcome(outcome),
+            () = &mut stopped => break,
+        }
+    }
     while let Ok(outcome) = outcomes.try_recv() {
         held.add_outcome(outcome);
     }
@@ -118,6 +123,12 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
 
 fn projectors(site: &Site) -> Vec<Option<Projector>> {
     site.amplifiers.iter().map(projector).collect()
+}
+
+/// A notice that an earlier run did not get delivered.
+fn waiting_again(undelivered: store::Undelivered) -> Waiting {
+    let body = (undelivered.attempts > 0).then_some(undelivered.body);
+    Waiting { notice: undelivered.notice, attempts: undelivered.attempts, body }
 }
 
 /// What the record remembers, for the watch and for the rest.

@@ -132,7 +132,7 @@ impl Walk {
                 notices.iter_mut().for_each(|notice| notice.recorded = false);
             }
         }
-        self.notices.send(notices.into_iter().map(Waiting::fresh).collect());
+        self.notices.send(notices.into_iter().map(|notice| Waiting { notice, attempts: 0, body: None }).collect());
     }
 
     fn commit(&mut self) -> bool {

@@ -4,11 +4,15 @@
 //! Pure: everything is written into a given writer; no clock, no file, no socket.
 
 mod alarms;
+mod notice;
 mod standing;
 mod time;
 mod understood;
+mod when;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
+pub use notice::{CAUTION, NoticeText, notice_text};
+pub use when::{local_time, rfc3339};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;

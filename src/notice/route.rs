@@ -1,0 +1,70 @@
+//! What every kind of receiver has in common: a notice is rendered to bytes once, the bytes are delivered, and the
+//! receiver's answer is judged. A new kind is one file with these two functions and one variant here.
+
+use std::time::Duration;
+
+use chrono_tz::Tz;
+
+use super::NoticeError;
+use super::webhook::Webhook;
+use crate::alarm::Notice;
+use crate::clock::Clock;
+use crate::config::{Receiver, Route};
+
+/// One receiver, ready to be sent to.
+pub(super) enum Sender {
+    Webhook(Webhook),
+}
+
+impl Sender {
+    /// Prepares the way to `receiver` (reads its secret, builds its client); contacts nobody.
+    pub(super) fn to(receiver: &Receiver) -> Result<Self, NoticeError> {
+        match &receiver.route {
+            Route::Webhook { url, token } => {
+                Webhook::new(&receiver.name, url, token.as_ref()).map(Sender::Webhook)
+            }
+        }
+    }
+
+    /// The bytes of `notice`: the same for the same notice and zone, whenever and however often it is called.
+    pub(super) fn render(&self, notice: &Notice, zone: Tz) -> Vec<u8> {
+        match self {
+            Sender::Webhook(_) => super::webhook::render(notice, zone),
+        }
+    }
+
+    /// One attempt, bounded in time and memory.
+    pub(super) async fn deliver(&self, notice: &Notice, body: Vec<u8>, clock: &Clock) -> Answer {
+        match self {
+            Sender::Webhook(webhook) => webhook.deliver(&notice.idempotency_key, body, clock).await,
+        }
+    }
+}
+
+/// How one attempt ended.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub(super) struct Answer {
+    pub(super) verdict: Verdict,
+    /// One line for people, without a secret in it.
+    pub(super) said: String,
+}
+
+/// What an answer means for the notice.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub(super) enum Verdict {
+    /// The receiver has it.
+    Taken,
+    /// It isn't there or isn't able; it will be, some day.
+    Later {
+        /// The wait that it asked for.
+        retry_after: Option<Duration>,
+    },
+    /// It says no, and would go on saying it until something is changed on one side: after `allowed` such answers
+    /// the notice is given up.
+    Refused {
+        /// How many refusals a notice is worth.
+        allowed: u32,
+    },
+    /// It says that it will never take any.
+    Gone,
+}
