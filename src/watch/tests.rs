@@ -2,72 +2,46 @@
 
 use super::*;
 use crate::alarm::{NoticeKind, Priority};
-use crate::config::{
-    Channel, Limit, LoggerSettings, MeasuredSupply, RailOf, Rating, Receiver, Route, StoreSettings,
-};
+use crate::config::Surroundings;
 use crate::quantity::Utc;
-use crate::reading::ChannelQuantity;
-use crate::supply::{Loading, MainsWave, Measured};
+
+const HALL: &str = r#"
+[site]
+name = "hall"
+time_zone = "Europe/Lisbon"
+[[logger]]
+name = "bench"
+port = "/dev/null"
+[[channel]]
+name = "mains"
+quantity = "mains_rms"
+[[channel]]
+name = "hall.reservoir"
+quantity = "rail"
+amplifier = "hall"
+node = "reservoir"
+[[amplifier]]
+name = "hall"
+[amplifier.measured]
+mains_v = 220
+rail_v = 452
+node = "reservoir"
+loading = "idle"
+meter_pct = 0.5
+[[amplifier.limit]]
+node = "reservoir"
+max_v = 480
+why = "anode supply limit"
+[[receiver]]
+name = "phone"
+webhook = "http://127.0.0.1:1/"
+"#;
 
 /// A site with one logger (mains, and the hall amplifier's reservoir), one limit and one receiver.
 pub(super) fn hall_site() -> Site {
-    let channel = |name: &str, quantity, rail| Channel {
-        name: name.into(),
-        was: None,
-        quantity,
-        sample_period: Duration::from_secs(1),
-        gain: 1.0,
-        offset_v: 0.0,
-        accuracy_pct: 0.5,
-        accuracy_v: 0.2,
-        rail,
-    };
-    Site {
-        file: "railtide.toml".into(),
-        name: "hall".into(),
-        time_zone: chrono_tz::Europe::Lisbon,
-        frequency_hz: 50.0,
-        declared_v: 230.0,
-        wave: MainsWave::default(),
-        store: StoreSettings { path: "railtide.db".into(), commit_every: Duration::from_secs(10) },
-        loggers: vec![LoggerSettings {
-            name: "bench".into(),
-            port: "/dev/null".into(),
-            baud: 115_200,
-            channels: vec![
-                channel("mains", ChannelQuantity::MainsRms, None),
-                channel(
-                    "hall.reservoir",
-                    ChannelQuantity::Rail,
-                    Some(RailOf { amplifier: "hall".into(), node: "reservoir".into() }),
-                ),
-            ],
-        }],
-        amplifiers: vec![Amplifier {
-            name: "hall".into(),
-            measured: Some(MeasuredSupply {
-                node: "reservoir".into(),
-                loading: Loading::Idle,
-                pair: Measured { mains_v: 220.0, rail_v: 452.0, meter_pct: 0.5 },
-            }),
-            circuit: None,
-            limits: vec![Limit {
-                node: "reservoir".into(),
-                max_v: 480.0,
-                min_v: None,
-                rating: Rating::Absolute,
-                loading: Loading::Idle,
-                why: "anode supply limit".into(),
-            }],
-        }],
-        alarms: vec![],
-        receivers: vec![Receiver {
-            name: "phone".into(),
-            route: Route::Webhook { url: "http://127.0.0.1:1/".into(), token: None },
-            min_priority: Priority::Low,
-        }],
-        guard_band: 1.0,
-    }
+    let conditions: Vec<&str> = crate::alarm::CONDITIONS.iter().map(|c| c.name).collect();
+    let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
+    Site::parse(HALL, "railtide.toml".as_ref(), &surroundings).unwrap()
 }
 
 pub(super) fn projectors(site: &Site) -> Vec<Option<Projector>> {
