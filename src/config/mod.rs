@@ -17,6 +17,7 @@ mod references;
 mod secret;
 mod site;
 mod table;
+mod valves;
 
 pub use complaint::{Complaint, Complaints, Place};
 pub use parse::Surroundings;
@@ -25,3 +26,4 @@ pub use site::{
     AlarmOverride, Amplifier, Bias, BiasFrom, Channel, ColdStart, DayWindow, Limit, LoggerSettings,
     MeasuredSupply, OutputStage, RailOf, Rating, Receiver, Route, ServiceEvent, Site, Standby, StoreSettings,
 };
+pub use valves::{OutputValve, Rectifier, output_valve, output_valves, rectifier, rectifiers};
