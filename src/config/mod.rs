@@ -8,15 +8,21 @@
 //! Pure but for [`Site::load`], which reads the one file that it's given.
 
 mod amplifier;
+mod circuit;
 mod complaint;
+mod filter;
+mod loads;
 mod logger;
 mod nearest;
 mod notices;
 mod parse;
+mod rectifier;
 mod references;
 mod secret;
 mod site;
 mod table;
+mod transformer;
+mod unlikely;
 mod valves;
 
 pub use complaint::{Complaint, Complaints, Place};
