@@ -279,7 +279,7 @@ railtide.toml:19: name = "hall.": expected a name of letters without accents, di
 railtide.toml:21: mains_v = 0: expected a number from 80 to 480, such as 220
 railtide.toml:22: rail_v = inf: expected a number from 1 to 5000, such as 452
 railtide.toml:23: node = "": expected some text such as "reservoir"
-railtide.toml:27: min_v = 500: expected less than max_v
+railtide.toml:27: min_v = 500: expected less than max_v, 400 V
 "#);
 }
 

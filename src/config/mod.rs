@@ -8,15 +8,22 @@
 //! Pure but for [`Site::load`], which reads the one file that it's given.
 
 mod amplifier;
+mod circuit;
 mod complaint;
+mod filter;
+mod loads;
 mod logger;
 mod nearest;
 mod notices;
 mod parse;
+mod rectifier;
 mod references;
 mod secret;
 mod site;
 mod table;
+mod transformer;
+mod unlikely;
+mod valves;
 
 pub use complaint::{Complaint, Complaints, Place};
 pub use parse::Surroundings;
@@ -25,3 +32,4 @@ pub use site::{
     AlarmOverride, Amplifier, Bias, BiasFrom, Channel, ColdStart, DayWindow, Limit, LoggerSettings,
     MeasuredSupply, OutputStage, RailOf, Rating, Receiver, Route, ServiceEvent, Site, Standby, StoreSettings,
 };
+pub use valves::{OutputValve, Rectifier, output_valve, output_valves, rectifier, rectifiers};

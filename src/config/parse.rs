@@ -7,6 +7,7 @@ use std::time::Duration;
 use chrono_tz::{TZ_VARIANTS, Tz};
 use toml::de::DeTable;
 
+use super::circuit::SiteMains;
 use super::complaint::{Complaints, Notes, Span};
 use super::nearest::nearest;
 use super::site::{Site, StoreSettings};
@@ -120,44 +121,58 @@ fn read<'a>(
     let folder = file.parent().unwrap_or(Path::new(""));
     let root = Table::open(notes, tree, Span { start: 0, end: 0 }, "the top level", ROOT);
 
+    let site = read_site(root);
     let store = read_store(root, folder, surroundings);
     let loggers = logger::read_loggers(root);
     let channels = logger::read_channels(root);
+    let amplifiers = amplifier::read_amplifiers(root, &site.mains);
     let alarms = notices::read_alarms(root, surroundings.conditions);
     let receivers = notices::read_receivers(root, folder);
-
-    let Some(site) = root.table("site", "[site]", SITE) else {
-        if !root.key("site").is_present() {
-            let says = "[site] is missing; expected it with at least a name and a time_zone";
-            notes.complain_of(root.header(), "", says);
-        }
-        return None;
-    };
-    let name = site.need("name").text();
-    let time_zone = read_time_zone(site);
-    let frequency_hz = site.key("frequency_hz").number(Bounds::Within(40.0, 70.0)).unwrap_or(50.0);
-    let declared_v = site.key("declared_v").number(Bounds::Within(80.0, 480.0)).unwrap_or(230.0);
-    let guard_band = site.key("guard_band").number(Bounds::Within(0.0, 5.0)).unwrap_or(1.0);
-    let wave = read_wave(site);
-
-    let amplifiers = amplifier::read_amplifiers(root);
     references::check(&loggers, &channels, &amplifiers);
 
     Some(Site {
         file: file.to_owned(),
-        name: name?.value,
-        time_zone: time_zone?,
-        frequency_hz,
-        declared_v,
-        wave,
+        name: site.name?,
+        time_zone: site.time_zone?,
+        frequency_hz: site.mains.frequency_hz,
+        declared_v: site.declared_v,
+        wave: site.mains.wave,
         store,
         loggers: logger::with_channels(loggers, channels)?,
         amplifiers: amplifiers.into_iter().map(|read| read.amplifier).collect::<Option<_>>()?,
         alarms: alarms?,
         receivers: receivers?,
-        guard_band,
+        guard_band: site.guard_band,
         warnings: Vec::new(),
     })
+}
+
+/// What `[site]` says, with defaults where it is silent; name and zone are `None` once complained about.
+struct ReadSite {
+    name: Option<String>,
+    time_zone: Option<Tz>,
+    declared_v: f64,
+    guard_band: f64,
+    mains: SiteMains,
+}
+
+fn read_site(root: Table<'_>) -> ReadSite {
+    let table = root.table("site", "[site]", SITE);
+    if !root.key("site").is_present() {
+        let says = "[site] is missing; expected it with at least a name and a time_zone";
+        root.notes().complain_of(root.header(), "", says);
+    }
+    let number = |key, bounds, usual| table.and_then(|t| t.key(key).number(bounds)).unwrap_or(usual);
+    ReadSite {
+        name: table.and_then(|t| t.need("name").text()).map(|name| name.value),
+        time_zone: table.and_then(read_time_zone),
+        declared_v: number("declared_v", Bounds::Within(80.0, 480.0), 230.0),
+        guard_band: number("guard_band", Bounds::Within(0.0, 5.0), 1.0),
+        mains: SiteMains {
+            frequency_hz: number("frequency_hz", Bounds::Within(40.0, 70.0), 50.0),
+            wave: table.map(read_wave).unwrap_or_default(),
+        },
+    }
 }
 
 fn read_store(root: Table<'_>, folder: &Path, surroundings: &Surroundings<'_>) -> StoreSettings {

@@ -29,7 +29,8 @@ pub(super) fn check(
         check_logger(*table, &logger_tables);
     }
     for amplifier in amplifiers {
-        check_limits(amplifier, &channel_tables);
+        check_nodes(amplifier, &channel_tables);
+        warn_if_unknowable(amplifier, &channel_tables);
     }
 }
 
@@ -106,26 +107,43 @@ fn check_rails(channels: &[Table<'_>], amplifiers: &[ReadAmplifier<'_>]) {
                 .refuse::<()>(&format!("line {line} measures this rail already; expected another node"));
         }
         let owner = amplifiers.iter().find(|a| a.table.key("name").peek() == Some(amplifier));
-        if let Some(fed) = owner.filter(|owner| owner.has_circuit()).and_then(|owner| owner.fed.as_ref()) {
+        if let Some(fed) = owner.filter(|owner| owner.full_way).and_then(|owner| owner.fed.as_ref()) {
             expect_known(node_entry, node, "the supply has no such node", fed.iter().map(String::as_str));
         }
     }
 }
 
-/// A limit stands on a node that the supply feeds or that a channel measures.
-fn check_limits(amplifier: &ReadAmplifier<'_>, channels: &[Table<'_>]) {
+/// A limit stands on a node that the supply feeds or, where that isn't stated the full way, a channel measures.
+fn check_nodes(amplifier: &ReadAmplifier<'_>, channels: &[Table<'_>]) {
     let Some(fed) = &amplifier.fed else { return };
     let name = amplifier.table.key("name").peek();
     let measured = channels
         .iter()
-        .filter(|channel| name.is_some() && channel.key("amplifier").peek() == name)
+        .filter(|channel| !amplifier.full_way && name.is_some() && channel.key("amplifier").peek() == name)
         .filter_map(|channel| channel.key("node").peek());
     let known: Vec<_> = fed.iter().map(String::as_str).chain(measured).collect();
-    for limit in &amplifier.limits {
-        let entry = limit.key("node");
+    let why = if amplifier.full_way {
+        "the supply has no such node"
+    } else {
+        "nothing feeds or measures such a node"
+    };
+    for table in &amplifier.on_nodes {
+        let entry = table.key("node");
         if let Some(node) = entry.peek() {
-            expect_known(entry, node, "nothing feeds or measures such a node", known.iter().copied());
+            expect_known(entry, node, why, known.iter().copied());
         }
+    }
+}
+
+/// Warns of an amplifier of whose rails nothing can be told.
+fn warn_if_unknowable(amplifier: &ReadAmplifier<'_>, channels: &[Table<'_>]) {
+    let table = amplifier.table;
+    let measured = channels.iter().any(|channel| channel.key("amplifier").peek() == table.key("name").peek());
+    if !measured && !amplifier.full_way && !table.key("measured").is_present() {
+        table.notes().warn(
+            table.header(),
+            "nothing says where its rails stand: it has no rail channel, no [amplifier.measured] and no circuit",
+        );
     }
 }
 

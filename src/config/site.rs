@@ -248,7 +248,7 @@ pub struct MeasuredSupply {
 }
 
 /// What a limit's figure already allows for.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, serde::Serialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Rating {
     /// Never to be exceeded, at any moment; also where the system is unknown.

@@ -88,6 +88,25 @@ impl<'a> Table<'a> {
         }
     }
 
+    /// Whether any of `keys` is present.
+    pub(super) fn has_any(&self, keys: &[&'static str]) -> bool {
+        keys.iter().any(|key| self.key(key).is_present())
+    }
+
+    /// Which of `ways` to state `what` is taken: the one that is present. Complains if none is, and about every
+    /// further one.
+    pub(super) fn one_of(&self, ways: &[&'static str], what: &str, expected: &str) -> Option<&'static str> {
+        let mut present = ways.iter().filter(|way| self.key(way).is_present());
+        let Some(way) = present.next() else {
+            self.missing(what, expected);
+            return None;
+        };
+        for other in present {
+            self.refuse(&[other], &format!("{way} states {what} already; expected one of the two"));
+        }
+        Some(way)
+    }
+
     /// The table `[name.key]`, if it is there.
     pub(super) fn table(&self, key: &'static str, name: &'static str, keys: Keys) -> Option<Table<'a>> {
         let entry = self.key(key);
@@ -103,7 +122,7 @@ impl<'a> Table<'a> {
         let expected = || format!("expected a list of tables: write {name} above each");
         match entry.value.map(Spanned::get_ref) {
             None => Vec::new(),
-            Some(DeValue::Array(items)) => {
+            Some(DeValue::Array(items)) if !items.is_empty() => {
                 let open = |item: &'a Spanned<DeValue<'a>>| match item.get_ref() {
                     DeValue::Table(entries) => {
                         Some(Table::open(self.notes, entries, item.span().into(), name, keys))
@@ -215,6 +234,20 @@ impl<'a> Entry<'a> {
     /// A finite number within `bounds`.
     pub(super) fn number(&self, bounds: Bounds) -> Option<f64> {
         self.number_in(self.value?, bounds)
+    }
+
+    /// A number, or a list of at least one, each within `bounds`.
+    pub(super) fn numbers(&self, bounds: Bounds) -> Option<Vec<f64>> {
+        match self.value?.get_ref() {
+            DeValue::Array(items) if !items.is_empty() => {
+                let read: Vec<_> = items.iter().map(|item| self.number_in(item, bounds)).collect();
+                read.into_iter().collect()
+            }
+            DeValue::Array(_) => {
+                self.refuse(&format!("expected at least one number such as {}", self.example))
+            }
+            _ => self.number(bounds).map(|x| vec![x]),
+        }
     }
 
     /// A whole number from `least` to `most`.
