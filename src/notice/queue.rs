@@ -55,15 +55,13 @@ struct Rest {
     tried: Priority,
 }
 
-/// When a lane may send next.
+/// Why a lane can't send.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Next {
+pub(super) enum Hold {
     /// Nothing waits.
     Nothing,
-    /// Not before this.
-    At(Mono),
-    /// Now.
-    Now,
+    /// The receiver is left alone until then.
+    Until(Mono),
 }
 
 /// How one receiver stands: for `notice list` and for the condition notice-stuck.
@@ -145,14 +143,9 @@ impl Queue {
         self.let_go.pop_front()
     }
 
-    /// What `lane` may do at `now`.
-    pub(super) fn next(&self, lane: usize, now: Mono) -> Next {
-        self.lanes[lane].next(now)
-    }
-
-    /// The notice that `lane` may send at `now`, if any, with the bytes of its last attempt; the lane counts as
-    /// sending until [`answered`](Self::answered).
-    pub(super) fn take(&mut self, lane: usize, now: Mono) -> Option<(Notice, Option<Vec<u8>>)> {
+    /// The notice that `lane` may send at `now`, with the bytes of its last attempt; the lane counts as sending until
+    /// [`answered`](Self::answered).
+    pub(super) fn take(&mut self, lane: usize, now: Mono) -> Result<(Notice, Option<Vec<u8>>), Hold> {
         self.lanes[lane].take(now)
     }
 
@@ -195,21 +188,17 @@ impl Lane {
         self.waiting.range((lowest, 0, 0)..).map(|(place, _)| place).find(not_sending).copied()
     }
 
-    fn next(&self, now: Mono) -> Next {
-        let Some((priority, ..)) = self.waiting.keys().next() else { return Next::Nothing };
-        let Some(rest) = &self.rest else { return Next::Now };
-        let urgent = *priority < rest.tried;
-        let due = if urgent { rest.until.min(rest.failed_at + URGENT_GAP) } else { rest.until };
-        if now < due { Next::At(due) } else { Next::Now }
-    }
-
-    fn take(&mut self, now: Mono) -> Option<(Notice, Option<Vec<u8>>)> {
-        if self.next(now) != Next::Now {
-            return None;
+    fn take(&mut self, now: Mono) -> Result<(Notice, Option<Vec<u8>>), Hold> {
+        let (place, entry) = self.waiting.first_key_value().ok_or(Hold::Nothing)?;
+        if let Some(rest) = &self.rest {
+            let urgent = place.0 < rest.tried;
+            let due = if urgent { rest.until.min(rest.failed_at + URGENT_GAP) } else { rest.until };
+            if now < due {
+                return Err(Hold::Until(due));
+            }
         }
-        let (place, entry) = self.waiting.first_key_value()?;
         self.sending = Some(*place);
-        Some((entry.waiting.notice.clone(), entry.waiting.body.clone()))
+        Ok((entry.waiting.notice.clone(), entry.waiting.body.clone()))
     }
 
     fn answered(
@@ -273,5 +262,197 @@ impl Lane {
             sending: self.sending.is_some(),
             next_attempt: self.rest.as_ref().filter(|_| !self.waiting.is_empty()).map(|rest| rest.until),
         }
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::alarm::{AlarmKey, Facts, NoticeKind};
+
+    fn waiting(id: u64, receiver: &str, priority: Priority) -> Waiting {
+        let notice = Notice {
+            id,
+            receiver: receiver.into(),
+            kind: NoticeKind::Raised,
+            priority,
+            at: Utc(id as i64),
+            key: AlarmKey { condition: "rail-high".into(), subject: "hall.reservoir".into() },
+            raised_at: Utc(id as i64),
+            facts: Facts::default(),
+            advice: String::new(),
+            idempotency_key: format!("key-{id}"),
+            recorded: true,
+        };
+        Waiting { notice, attempts: 0, body: None }
+    }
+
+    fn queue(capacity: usize, notices: impl IntoIterator<Item = (u64, Priority)>) -> Queue {
+        let mut queue = Queue::new(["phone".to_owned(), "mail".to_owned()], capacity);
+        notices.into_iter().for_each(|(id, priority)| queue.add(waiting(id, "phone", priority), Utc(0)));
+        queue
+    }
+
+    fn answer(verdict: Verdict) -> Answer {
+        Answer { verdict, said: "said".into() }
+    }
+
+    const LATER: Verdict = Verdict::Later { retry_after: None };
+    const AT: (Mono, Utc) = (Mono(0), Utc(0));
+
+    fn minute(_failures: u32) -> Duration {
+        Duration::from_secs(60)
+    }
+
+    /// The numbers in the order in which they are delivered, if every attempt succeeds.
+    fn drain(queue: &mut Queue, lane: usize) -> Vec<u64> {
+        let mut order = Vec::new();
+        while let Ok((notice, _)) = queue.take(lane, Mono(0)) {
+            order.push(notice.id);
+            queue.answered(lane, &answer(Verdict::Taken), vec![], AT, minute);
+        }
+        order
+    }
+
+    #[test]
+    fn a_lane_is_drained_by_priority_then_number() {
+        use Priority::{High, Low, Medium};
+        let mut queue = queue(10, [(5, Low), (4, High), (1, Medium), (2, Low), (3, High)]);
+        assert_eq!(drain(&mut queue, 0), [3, 4, 1, 2, 5]);
+    }
+
+    #[test]
+    fn when_full_the_least_urgent_oldest_goes_and_is_reported() {
+        use Priority::{High, Low, Medium};
+        let mut queue = queue(3, [(1, High), (2, Low), (3, Low), (4, Medium), (5, Medium)]);
+        let let_go: Vec<_> = std::iter::from_fn(|| queue.next_let_go()).collect();
+        assert_eq!(let_go.iter().map(|outcome| outcome.notice_id).collect::<Vec<_>>(), [2, 3]);
+        assert!(let_go.iter().all(|outcome| outcome.delivery == Delivery::GivenUp { at: Utc(0) }));
+        assert_eq!(drain(&mut queue, 0), [1, 4, 5]);
+    }
+
+    #[test]
+    fn the_one_being_sent_is_never_the_one_that_goes() {
+        let mut queue = queue(1, [(1, Priority::Low)]);
+        queue.take(0, Mono(0)).unwrap();
+        queue.add(waiting(2, "mail", Priority::High), Utc(0));
+        assert_eq!(queue.next_let_go().map(|outcome| outcome.notice_id), Some(2));
+        assert_eq!(queue.status()[0].queued, 1);
+    }
+
+    #[test]
+    fn unreported_ones_are_bounded_too() {
+        let mut queue = queue(4, (1..=100).map(|id| (id, Priority::Low)));
+        let reported: Vec<_> =
+            std::iter::from_fn(|| queue.next_let_go()).map(|outcome| outcome.notice_id).collect();
+        assert_eq!(reported, [93, 94, 95, 96]);
+    }
+
+    #[test]
+    fn a_known_key_is_passed_over_while_it_waits_and_after_it_was_delivered() {
+        let mut queue = queue(10, [(1, Priority::Low), (1, Priority::Low)]);
+        assert_eq!(drain(&mut queue, 0), [1]);
+        queue.add(waiting(1, "phone", Priority::Low), Utc(0));
+        assert_eq!(drain(&mut queue, 0), [0; 0]);
+        queue.add(waiting(1, "mail", Priority::Low), Utc(0));
+        assert_eq!(drain(&mut queue, 1), [1], "another receiver doesn't know it");
+    }
+
+    #[test]
+    fn one_that_was_let_go_may_be_handed_over_again() {
+        let mut queue = queue(1, [(1, Priority::Low), (2, Priority::High)]);
+        assert_eq!(drain(&mut queue, 0), [2]);
+        queue.add(waiting(1, "phone", Priority::Low), Utc(0));
+        assert_eq!(drain(&mut queue, 0), [1]);
+    }
+
+    #[test]
+    fn what_a_lane_remembers_of_the_finished_is_bounded() {
+        let mut queue = queue(10, []);
+        for id in 0..3 * REMEMBERED as u64 {
+            queue.add(waiting(id, "phone", Priority::Low), Utc(0));
+            assert_eq!(drain(&mut queue, 0), [id]);
+        }
+        assert_eq!(queue.lanes[0].known.len(), REMEMBERED);
+    }
+
+    #[test]
+    fn a_failed_receiver_rests_as_a_whole_but_not_for_what_is_more_urgent() {
+        let mut queue = queue(10, [(1, Priority::Medium)]);
+        queue.take(0, Mono(0)).unwrap();
+        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        queue.add(waiting(2, "phone", Priority::Medium), Utc(0));
+        assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(60_000))));
+        assert_eq!(queue.take(1, Mono(0)), Err(Hold::Nothing), "the other receiver is not held");
+
+        queue.add(waiting(3, "phone", Priority::High), Utc(0));
+        assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(5_000))), "but not within a few seconds");
+        assert_eq!(queue.take(0, Mono(5_000)).unwrap().0.id, 3);
+        queue.answered(0, &answer(LATER), vec![], (Mono(5_000), Utc(0)), minute);
+        queue.add(waiting(4, "phone", Priority::High), Utc(0));
+        assert_eq!(queue.take(0, Mono(5_000)), Err(Hold::Until(Mono(65_000))), "an equally urgent one waits");
+    }
+
+    #[test]
+    fn a_success_ends_the_rest_and_the_row_of_failures() {
+        let mut queue = queue(10, [(1, Priority::Low), (2, Priority::Low)]);
+        let mut rows = Vec::new();
+        for now in [0, 60_000] {
+            queue.take(0, Mono(now)).unwrap();
+            queue.answered(0, &answer(LATER), vec![], (Mono(now), Utc(0)), |row| {
+                rows.push(row);
+                minute(row)
+            });
+        }
+        assert_eq!(rows, [1, 2]);
+        queue.take(0, Mono(120_000)).unwrap();
+        queue.answered(0, &answer(Verdict::Taken), vec![], (Mono(120_000), Utc(0)), minute);
+        assert_eq!(queue.status()[0].failures, 0);
+        assert_eq!(queue.take(0, Mono(120_000)).unwrap().0.id, 2);
+    }
+
+    #[test]
+    fn a_refused_notice_is_given_up_after_as_many_refusals_as_it_is_worth() {
+        let mut queue = queue(10, [(1, Priority::Low)]);
+        // What isn't a refusal doesn't count.
+        for verdict in [LATER, LATER, Verdict::Refused { allowed: 2 }] {
+            queue.take(0, Mono(0)).unwrap();
+            let outcome = queue.answered(0, &answer(verdict), vec![], AT, |_| Duration::ZERO).unwrap();
+            assert_eq!(outcome.delivery, Delivery::Waiting);
+        }
+        queue.take(0, Mono(0)).unwrap();
+        let outcome =
+            queue.answered(0, &answer(Verdict::Refused { allowed: 2 }), b"b".into(), AT, minute).unwrap();
+        assert_eq!((outcome.attempts, outcome.delivery), (4, Delivery::GivenUp { at: Utc(0) }));
+        assert_eq!(outcome.body, b"b");
+        assert_eq!(queue.status()[0].queued, 0);
+    }
+
+    #[test]
+    fn a_receiver_that_the_config_no_longer_names_is_said() {
+        let mut queue = queue(10, []);
+        queue.add(waiting(9, "pager", Priority::High), Utc(7));
+        let outcome = queue.next_let_go().unwrap();
+        assert_eq!((outcome.notice_id, outcome.delivery), (9, Delivery::GivenUp { at: Utc(7) }));
+        assert!(outcome.said.contains("\"pager\""), "{}", outcome.said);
+    }
+
+    #[test]
+    fn the_status_tells_what_waits_and_since_when() {
+        let mut queue = queue(10, [(8, Priority::High), (3, Priority::Low)]);
+        queue.take(0, Mono(0)).unwrap();
+        assert!(queue.status()[0].sending);
+        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        let phone = ReceiverStatus {
+            receiver: "phone".into(),
+            queued: 2,
+            oldest_at: Some(Utc(3)),
+            last_said: Some("said".into()),
+            failures: 1,
+            sending: false,
+            next_attempt: Some(Mono(60_000)),
+        };
+        assert_eq!(queue.status()[0], phone);
+        assert_eq!(queue.status()[1].queued, 0);
     }
 }

@@ -313,6 +313,7 @@ fn suffix(unit: &str) -> Option<&'static str> {
 #[cfg(test)]
 mod tests {
     use super::*;
+    use crate::alarm::{AlarmKey, Facts, NoticeKind, Priority};
 
     #[test]
     fn every_form_of_retry_after_is_read() {
@@ -366,5 +367,138 @@ mod tests {
             let error = Webhook::new("phone", url, None).err().map(|error| error.to_string());
             assert!(error.as_deref().is_some_and(|said| said.contains("\"phone\"")), "{url}: {error:?}");
         }
+    }
+
+    fn rail_high() -> Notice {
+        Notice {
+            id: 7,
+            receiver: "phone".into(),
+            kind: NoticeKind::Raised,
+            priority: Priority::High,
+            at: Utc(1_791_304_930_000), // 2026-10-06T16:42:10Z
+            key: AlarmKey { condition: "rail-high".into(), subject: "hall.reservoir".into() },
+            raised_at: Utc(1_791_304_930_000),
+            facts: Facts {
+                value: Some(491.6),
+                value_u: Some(4.2),
+                setpoint: Some(475.8),
+                limit: Some(480.0),
+                unit: "V".into(),
+                mains_v: Some(239.3),
+                source: "projected".into(),
+                loading: "idle".into(),
+                note: String::new(),
+            },
+            advice: "Switch the amplifier off.".into(),
+            idempotency_key: "4f1c-7".into(),
+            recorded: true,
+        }
+    }
+
+    fn json(notice: &Notice) -> String {
+        let value: serde_json::Value = serde_json::from_slice(&render(notice, Tz::Europe__Berlin)).unwrap();
+        assert_eq!(value["caution"], CAUTION);
+        String::from_utf8(render(notice, Tz::Europe__Berlin)).unwrap().replace(",\"", ",\n\"")
+    }
+
+    #[test]
+    fn the_json_of_a_projected_rail() {
+        insta::assert_snapshot!(json(&rail_high()), @r#"
+        {"version":1,
+        "idempotency_key":"4f1c-7",
+        "notice_id":7,
+        "receiver":"phone",
+        "kind":"raised",
+        "priority":"high",
+        "condition":"rail-high",
+        "subject":"hall.reservoir",
+        "at":"2026-10-06T18:42:10.000+02:00",
+        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "value_v":491.6,
+        "value_u_v":4.2,
+        "setpoint_v":475.8,
+        "limit_v":480.0,
+        "mains_v":239.3,
+        "source":"projected",
+        "loading":"idle",
+        "advice":"Switch the amplifier off.",
+        "recorded":true,
+        "title":"rail-high: hall.reservoir would stand at 492 V ± 4 V",
+        "text":"Alarm rail-high for hall.reservoir, priority high.\nIt would stand at 492 V ± 4 V, projected from mains at 239.3 V for the loading \"idle\"; the setpoint is 475.8 V, the limit 480 V.\nSince 18:42:10 CEST on Tue 6 Oct 2026.\nWhat to do: Switch the amplifier off.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
+        "caution":"railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe."}
+        "#);
+    }
+
+    #[test]
+    fn the_json_of_a_silent_logger_from_memory() {
+        let mut notice = rail_high();
+        notice.kind = NoticeKind::Returned;
+        notice.key = AlarmKey { condition: "logger-silent".into(), subject: "bench".into() };
+        notice.at = Utc(notice.raised_at.0 + 65_000);
+        notice.facts =
+            Facts { value: Some(65.0), setpoint: Some(30.0), unit: "s".into(), ..Facts::default() };
+        notice.recorded = false;
+        insta::assert_snapshot!(json(&notice), @r#"
+        {"version":1,
+        "idempotency_key":"4f1c-7",
+        "notice_id":7,
+        "receiver":"phone",
+        "kind":"returned",
+        "priority":"high",
+        "condition":"logger-silent",
+        "subject":"bench",
+        "at":"2026-10-06T18:43:15.000+02:00",
+        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "value_s":65.0,
+        "setpoint_s":30.0,
+        "advice":"Switch the amplifier off.",
+        "recorded":false,
+        "title":"Back to normal: logger-silent, bench (not recorded)",
+        "text":"Alarm logger-silent for bench has returned to normal.\nIt lasted 1 min 5 s; the setpoint is 30 s.\nRaised at 18:42:10 CEST on Tue 6 Oct 2026, returned at 18:43:15 CEST on Tue 6 Oct 2026, after 1 min 5 s.\nNot recorded: the record could not be written, so this comes from memory.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
+        "caution":"railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe."}
+        "#);
+    }
+
+    #[test]
+    fn the_json_of_a_trial() {
+        let mut notice = rail_high();
+        notice.kind = NoticeKind::Trial;
+        notice.key.subject = String::new();
+        notice.facts = Facts::default();
+        notice.advice = String::new();
+        insta::assert_snapshot!(json(&notice), @r#"
+        {"version":1,
+        "idempotency_key":"4f1c-7",
+        "notice_id":7,
+        "receiver":"phone",
+        "kind":"trial",
+        "priority":"high",
+        "condition":"rail-high",
+        "at":"2026-10-06T18:42:10.000+02:00",
+        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "recorded":true,
+        "title":"Trial notice from railtide",
+        "text":"A trial of the receiver phone, asked for at 18:42:10 CEST on Tue 6 Oct 2026.\nNo alarm stands behind it: if you can read this, notices reach you.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
+        "caution":"railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe."}
+        "#);
+    }
+
+    #[test]
+    fn a_unit_without_a_suffix_is_said_beside_the_figures() {
+        let mut notice = rail_high();
+        notice.facts = Facts { value: Some(3.0), unit: "furlongs".into(), ..Facts::default() };
+        assert!(json(&notice).contains("\"value\":3.0,\n\"unit\":\"furlongs\""), "{}", json(&notice));
+    }
+
+    #[test]
+    fn a_figure_that_is_none_is_left_out() {
+        let mut notice = rail_high();
+        notice.facts.value = Some(f64::NAN);
+        notice.facts.mains_v = Some(f64::INFINITY);
+        assert!(
+            !json(&notice).contains("value_v") && !json(&notice).contains("mains_v"),
+            "{}",
+            json(&notice)
+        );
     }
 }

@@ -9,7 +9,7 @@ use tokio::task::JoinSet;
 
 use super::NoticeError;
 use super::backoff::next_attempt;
-use super::queue::{Next, Queue, ReceiverStatus};
+use super::queue::{Hold, Queue, ReceiverStatus};
 use super::route::{Answer, Sender, Verdict};
 use crate::alarm::{Delivery, Notice, Outcome};
 use crate::clock::Clock;
@@ -176,21 +176,14 @@ impl Delivering {
     async fn next(&self) -> (Notice, Option<Vec<u8>>) {
         let bell = &self.shared.bells[self.lane];
         loop {
-            let next = {
-                let mut queue = self.shared.lock();
-                let now = self.clock.now().mono;
-                if let Some(due) = queue.take(self.lane, now) {
-                    return due;
-                }
-                queue.next(self.lane, now)
-            };
-            match next {
-                Next::Nothing => bell.notified().await,
-                Next::At(due) => tokio::select! {
+            let taken = self.shared.lock().take(self.lane, self.clock.now().mono);
+            match taken {
+                Ok(due) => return due,
+                Err(Hold::Nothing) => bell.notified().await,
+                Err(Hold::Until(due)) => tokio::select! {
                     () = bell.notified() => {}
                     () = self.clock.sleep_until(due) => {}
                 },
-                Next::Now => {}
             }
         }
     }

@@ -47,9 +47,10 @@ pub fn notice_text(notice: &Notice, zone: Tz) -> NoticeText {
 fn title(notice: &Notice) -> String {
     let what = about(notice, ": ");
     match notice.kind {
-        NoticeKind::Raised => match standing(&notice.facts, Tense::Now) {
-            Some(standing) => format!("{what} {standing}"),
-            None => what,
+        NoticeKind::Raised => match (notice.facts.value, standing(&notice.facts, Tense::Now)) {
+            (Some(value), _) if notice.facts.unit == "s" => format!("{what}, for {}", plain(value, "s")),
+            (_, Some(standing)) => format!("{what} {standing}"),
+            _ => what,
         },
         NoticeKind::Returned => format!("Back to normal: {}", about(notice, ", ")),
         NoticeKind::Trial => "Trial notice from railtide".to_owned(),
@@ -233,7 +234,15 @@ mod tests {
 
     #[test]
     fn a_projected_rail_would_stand_there() {
-        insta::assert_snapshot!(said(&rail_high()), @"");
+        insta::assert_snapshot!(said(&rail_high()), @r#"
+        rail-high: hall.reservoir would stand at 492 V ± 4 V
+        --
+        Alarm rail-high for hall.reservoir, priority high.
+        It would stand at 492 V ± 4 V, projected from mains at 239.3 V for the loading "idle"; the setpoint is 475.8 V, the limit 480 V.
+        Since 18:42:10 CEST on Tue 6 Oct 2026.
+        What to do: Switch the amplifier off until the mains is lower.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
@@ -243,7 +252,16 @@ mod tests {
         notice.facts.value_u = Some(1.3);
         notice.facts.loading = String::new();
         notice.facts.note = "The projection says 489 V ± 4 V.".into();
-        insta::assert_snapshot!(said(&notice), @"");
+        insta::assert_snapshot!(said(&notice), @r#"
+        rail-high: hall.reservoir stands at 491.6 V ± 1.3 V
+        --
+        Alarm rail-high for hall.reservoir, priority high.
+        It stands at 491.6 V ± 1.3 V, measured, with mains at 239.3 V; the setpoint is 475.8 V, the limit 480 V.
+        Since 18:42:10 CEST on Tue 6 Oct 2026.
+        What to do: Switch the amplifier off until the mains is lower.
+        Note: The projection says 489 V ± 4 V.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
@@ -252,7 +270,14 @@ mod tests {
         notice.kind = NoticeKind::Returned;
         notice.at = RAISED_AT + Duration::from_secs(27 * 60 + 50);
         notice.facts.value = Some(468.2);
-        insta::assert_snapshot!(said(&notice), @"");
+        insta::assert_snapshot!(said(&notice), @r#"
+        Back to normal: rail-high, hall.reservoir
+        --
+        Alarm rail-high for hall.reservoir has returned to normal.
+        It would stand at 468 V ± 4 V, projected from mains at 239.3 V for the loading "idle"; the setpoint is 475.8 V, the limit 480 V.
+        Raised at 18:42:10 CEST on Tue 6 Oct 2026, returned at 19:10:00 CEST on Tue 6 Oct 2026, after 27 min 50 s.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
@@ -273,7 +298,16 @@ mod tests {
             Facts { value: Some(65.0), setpoint: Some(30.0), unit: "s".into(), ..Facts::default() };
         notice.advice = "See whether the logger is plugged in and its lamp is lit.".into();
         notice.recorded = false;
-        insta::assert_snapshot!(said(&notice), @"");
+        insta::assert_snapshot!(said(&notice), @r#"
+        logger-silent: bench, for 1 min 5 s (not recorded)
+        --
+        Alarm logger-silent for bench, priority medium.
+        It has lasted 1 min 5 s; the setpoint is 30 s.
+        Since 18:42:10 CEST on Tue 6 Oct 2026.
+        What to do: See whether the logger is plugged in and its lamp is lit.
+        Not recorded: the record could not be written, so this comes from memory.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
@@ -282,7 +316,13 @@ mod tests {
         notice.key = AlarmKey { condition: "store-full".into(), subject: String::new() };
         notice.facts = Facts::default();
         notice.advice = String::new();
-        insta::assert_snapshot!(said(&notice), @"");
+        insta::assert_snapshot!(said(&notice), @r#"
+        store-full
+        --
+        Alarm store-full, priority high.
+        Since 18:42:10 CEST on Tue 6 Oct 2026.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
@@ -290,7 +330,13 @@ mod tests {
         let mut notice = rail_high();
         notice.kind = NoticeKind::Trial;
         notice.facts = Facts::default();
-        insta::assert_snapshot!(said(&notice), @"");
+        insta::assert_snapshot!(said(&notice), @r#"
+        Trial notice from railtide
+        --
+        A trial of the receiver phone, asked for at 18:42:10 CEST on Tue 6 Oct 2026.
+        No alarm stands behind it: if you can read this, notices reach you.
+        railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+        "#);
     }
 
     #[test]
