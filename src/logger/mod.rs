@@ -3,6 +3,14 @@
 //! A thread of its own reads each port and hands bytes with their arrival time to a decoder; what comes out, one
 //! [`FromLogger`] after the other over a bounded channel, is all that the rest of the house sees.
 
+mod decode;
+mod tide;
+
+pub use decode::Decoder;
+pub use tide::{
+    MAX_CHANNEL_NAME, MAX_LINE, Pairs, TideLine, Unreadable, Unwritable, Value, crc16, write_line,
+};
+
 use crate::quantity::Moment;
 
 /// What a logger has to say, in the order in which it happened.
@@ -67,6 +75,8 @@ pub enum LineFault {
     Malformed,
     /// A channel that the config doesn't name; the line's other channels are kept.
     UnknownChannel,
-    /// Not a number, infinite, or beyond what can be stored; the line's other channels are kept.
+    /// Empty, not a number, infinite, or beyond what can be stored; the line's other channels are kept.
     BadValue,
+    /// A line that had been read already: the same sequence number and milliseconds as the one before.
+    Duplicate,
 }
