@@ -5,8 +5,7 @@ mod support;
 
 use std::time::Duration;
 
-use support::receiver::Receiver;
-use support::{Bench, Line, wait_for};
+use support::{Bench, Line, Phone, wait_for};
 
 /// Sends mains at 20 lines a second until `until` holds.
 fn keep_sending(line: &mut Line, mains_mv: i64, what: &str, mut until: impl FnMut() -> bool) -> u64 {
@@ -24,7 +23,7 @@ fn keep_sending(line: &mut Line, mains_mv: i64, what: &str, mut until: impl FnMu
 
 #[test]
 fn a_scripted_evening_is_stored_warned_of_once_acknowledged_and_over() {
-    let receiver = Receiver::start();
+    let receiver = Phone::start();
     let mut line = Line::new();
     let bench = Bench::hall(&line.device(), &receiver.url());
     let daemon = bench.start();
@@ -35,8 +34,8 @@ fn a_scripted_evening_is_stored_warned_of_once_acknowledged_and_over() {
     });
     assert_eq!(bench.alarm_state("rail-high:hall.reservoir").as_deref().unwrap_or("normal"), "normal");
 
-    sent += keep_sending(&mut line, 238_000, "a notice arrives", || !receiver.bodies().is_empty());
-    let notice = receiver.bodies().remove(0);
+    sent += keep_sending(&mut line, 238_000, "a notice arrives", || !receiver.notices().is_empty());
+    let notice = receiver.notices().remove(0);
     assert_eq!(notice["alarm"], "rail-high:hall.reservoir");
     assert_eq!(notice["kind"], "raised");
     assert_eq!(bench.alarm_state("rail-high:hall.reservoir").as_deref(), Some("unacknowledged"));
@@ -60,10 +59,10 @@ fn a_scripted_evening_is_stored_warned_of_once_acknowledged_and_over() {
     sent += keep_sending(&mut line, 226_000, "the alarm returns to normal", || {
         bench.alarm_state("rail-high:hall.reservoir").as_deref() == Some("normal")
     });
-    wait_for("the all-clear arrives", || (receiver.bodies().len() == 2).then_some(()));
+    wait_for("the all-clear arrives", || (receiver.notices().len() == 2).then_some(()));
     assert!(daemon.stop().success());
 
-    let kinds: Vec<_> = receiver.bodies().iter().map(|b| b["kind"].as_str().unwrap().to_owned()).collect();
+    let kinds: Vec<_> = receiver.notices().iter().map(|b| b["kind"].as_str().unwrap().to_owned()).collect();
     assert_eq!(kinds, ["raised", "returned"], "one warning and one all-clear");
     assert_eq!(bench.count("SELECT count(*) FROM open"), Some(sent as i64), "every reading is stored");
     assert_eq!(bench.count("SELECT count(*) FROM open WHERE quality <> 0"), Some(0));

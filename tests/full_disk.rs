@@ -11,8 +11,7 @@ use std::path::PathBuf;
 use std::process::Command;
 use std::time::Duration;
 
-use support::receiver::Receiver;
-use support::{Bench, Daemon, Line, wait_for};
+use support::{Bench, Daemon, Line, Phone, wait_for};
 
 /// The daemon inside a mount namespace where `<folder>/disk` is a tmpfs of 1 MiB; `None` where that isn't allowed.
 fn start_on_small_disk(bench: &Bench) -> Option<(Daemon, PathBuf)> {
@@ -47,7 +46,7 @@ fn count(database: &std::path::Path, sql: &str) -> Option<i64> {
 
 #[test]
 fn with_the_disk_full_the_notice_goes_out_marked_and_everything_held_is_written_when_there_is_room() {
-    let receiver = Receiver::start();
+    let receiver = Phone::start();
     let mut line = Line::new();
     let bench = Bench::hall(&line.device(), &receiver.url());
     bench.change_config(r#"path = "hall.db""#, r#"path = "disk/hall.db""#);
@@ -76,9 +75,9 @@ fn with_the_disk_full_the_notice_goes_out_marked_and_everything_held_is_written_
     });
     wait_for("the notice arrives all the same", || {
         send(240_000, &mut sent);
-        (!receiver.bodies().is_empty()).then_some(())
+        (!receiver.notices().is_empty()).then_some(())
     });
-    let notice = receiver.bodies().remove(0);
+    let notice = receiver.notices().remove(0);
     assert_eq!(notice["alarm"], "rail-high:hall.reservoir");
     assert_eq!(notice["recorded"], false);
     assert!(notice["text"].as_str().unwrap().contains("not recorded"), "{notice}");
@@ -96,6 +95,6 @@ fn with_the_disk_full_the_notice_goes_out_marked_and_everything_held_is_written_
     wait_for("the daemon has committed and stopped", || {
         bench.log().lines().last()?.contains("stopped").then_some(())
     });
-    assert_eq!(receiver.bodies().len(), 1, "told once");
+    assert_eq!(receiver.notices().len(), 1, "told once");
     assert!(bench.log().contains("the record can be written again"), "{}", bench.log());
 }

@@ -7,8 +7,7 @@ mod support;
 use std::collections::BTreeMap;
 use std::time::Duration;
 
-use support::receiver::Receiver;
-use support::{Bench, Line, wait_for};
+use support::{Bench, Line, Phone, wait_for};
 
 /// A small generator of its own (Marsaglia's xorshift, 2003), so that a run can be repeated by its seed.
 struct Random(u64);
@@ -27,7 +26,7 @@ fn a_daemon_killed_at_random_moments_under_load_loses_nothing_that_was_committed
     let kills: u32 = std::env::var("RAILTIDE_KILLS").ok().and_then(|n| n.parse().ok()).unwrap_or(20);
     let seed = std::env::var("RAILTIDE_SEED").ok().and_then(|n| n.parse().ok()).unwrap_or(0x5EED_1234_ABCD);
     let mut random = Random(seed);
-    let receiver = Receiver::start();
+    let receiver = Phone::start();
     let mut line = Line::new();
     let bench = Bench::hall(&line.device(), &receiver.url());
     bench.change_config(r#"commit_every = "1 s""#, r#"commit_every = "50 ms""#);
@@ -93,7 +92,7 @@ fn a_daemon_killed_at_random_moments_under_load_loses_nothing_that_was_committed
 
     // Every notice of the outbox arrived; a repeat carries the key of the first.
     let mut arrived: BTreeMap<String, usize> = BTreeMap::new();
-    for body in receiver.bodies() {
+    for body in receiver.notices() {
         *arrived.entry(body["idempotency_key"].as_str().unwrap().to_owned()).or_default() += 1;
     }
     let notices = bench.count("SELECT count(*) FROM outbox").unwrap();

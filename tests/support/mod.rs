@@ -53,6 +53,33 @@ impl Line {
     }
 }
 
+/// A receiver of notices for tests that have no runtime of their own.
+pub struct Phone {
+    runtime: tokio::runtime::Runtime,
+    receiver: receiver::TestReceiver,
+}
+
+impl Phone {
+    pub fn start() -> Self {
+        let runtime = tokio::runtime::Builder::new_multi_thread().worker_threads(1).enable_all().build().unwrap();
+        let receiver = runtime.block_on(receiver::TestReceiver::start(receiver::Mode::Ok));
+        Phone { runtime, receiver }
+    }
+
+    pub fn answer(&mut self, mode: receiver::Mode) {
+        self.runtime.block_on(self.receiver.set(mode));
+    }
+
+    pub fn url(&self) -> String {
+        self.receiver.url()
+    }
+
+    /// The notices that it took, in the order in which they came.
+    pub fn notices(&self) -> Vec<serde_json::Value> {
+        self.receiver.requests().iter().filter(|request| request.taken).map(receiver::Recorded::json).collect()
+    }
+}
+
 /// A tide line made here from its description, independently of the program's own printer.
 pub fn tide_line(seq: u32, ms: u64, values: &[(&str, i64)]) -> String {
     let mut body = format!("{seq} {ms}");
