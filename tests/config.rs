@@ -191,7 +191,7 @@ railtide.toml:16: name = "mains": the [[channel]] of line 12 has the same; expec
 railtide.toml:18: amplifier = "hal": no such amplifier; did you mean "hall"?
 railtide.toml:22: "5pm-12pm": expected a stretch of the day such as "17:00-24:00"
 railtide.toml:23: [[amplifier.limit]]: node is missing; expected for example node = "reservoir"
-railtide.toml:27: webhook = "notices.example": expected an address such as "https://notices.example/hall"
+railtide.toml:27: webhook: expected an address such as "https://notices.example/hall"
 "#);
     assert_eq!(complaints(text).lines().count(), 12);
 }
@@ -415,7 +415,7 @@ fn a_token_in_the_clear_is_warned_of() {
     );
     assert_eq!(site.warnings.len(), 1);
     assert_snapshot!(site.warnings[0], @r#"
-/etc/railtide.toml:2: webhook = 'http://h.example/': the token goes over the network in the clear; https:// would hide it
+/etc/railtide.toml:2: webhook: the token goes over the network in the clear; https:// would hide it
 "#);
     let Route::Webhook { token, .. } = &site.receivers[0].route;
     assert_eq!(token.as_ref().unwrap().to_string(), "environment variable TOKEN");
