@@ -95,6 +95,33 @@ fn what_is_left_out_has_the_documented_default() {
 }
 
 #[test]
+fn numbers_and_lines_may_be_written_in_any_way_that_toml_knows() {
+    let site = parse(
+        "\u{feff}site = { name = 'hall', time_zone = 'Europe/London', declared_v = 2.3e2 }\r\n\
+         logger = [{ port = 'COM3', baud = 115_200 }]\r\n\
+         channel = [{ name = 'mains', quantity = 'mains_rms', gain = +1_000.5, sample_period_ms = 0x3e8 }]\r\n",
+    );
+    let mains = &site.loggers[0].channels[0];
+    assert_eq!((site.declared_v, site.loggers[0].baud, mains.gain), (230.0, 115_200, 1000.5));
+    assert_eq!(mains.sample_period, Duration::from_secs(1));
+    let text = complaints("[site]\r\nname = 5\r\ntime_zone = \"Europe/London\"\r\n");
+    assert_snapshot!(text, @r#"
+railtide.toml:2: name = 5: expected text in quotes such as "village hall"
+"#);
+}
+
+#[test]
+fn deep_nesting_and_long_words_are_no_trouble() {
+    let nested = format!("a = {}", "[".repeat(100_000));
+    let tables = format!("a = {}", "{b=".repeat(100_000));
+    let dotted = format!("{}c = 1", "b.".repeat(100_000));
+    let long = format!("{} = \"{}\"", "k".repeat(100_000), "v".repeat(100_000));
+    for text in [nested, tables, dotted, long] {
+        assert!(Site::parse(&text, Path::new("f"), &surroundings()).is_err());
+    }
+}
+
+#[test]
 fn channels_go_to_the_logger_that_they_name() {
     let site = parse(
         "site = { name = 'hall', time_zone = 'Europe/London' }\n\
@@ -164,7 +191,7 @@ railtide.toml:16: name = "mains": the [[channel]] of line 12 has the same; expec
 railtide.toml:18: amplifier = "hal": no such amplifier; did you mean "hall"?
 railtide.toml:22: "5pm-12pm": expected a stretch of the day such as "17:00-24:00"
 railtide.toml:23: [[amplifier.limit]]: node is missing; expected for example node = "reservoir"
-railtide.toml:27: webhook = "notices.example": expected an address such as "https://notices.example/hall"
+railtide.toml:27: webhook: expected an address such as "https://notices.example/hall"
 "#);
     assert_eq!(complaints(text).lines().count(), 12);
 }
@@ -388,7 +415,7 @@ fn a_token_in_the_clear_is_warned_of() {
     );
     assert_eq!(site.warnings.len(), 1);
     assert_snapshot!(site.warnings[0], @r#"
-/etc/railtide.toml:2: webhook = 'http://h.example/': the token goes over the network in the clear; https:// would hide it
+/etc/railtide.toml:2: webhook: the token goes over the network in the clear; https:// would hide it
 "#);
     let Route::Webhook { token, .. } = &site.receivers[0].route;
     assert_eq!(token.as_ref().unwrap().to_string(), "environment variable TOKEN");

@@ -129,6 +129,16 @@ fn a_stated_secondary_is_taken_as_it_is_with_two_per_cent_of_doubt() {
 }
 
 #[test]
+fn a_winding_is_as_the_rectifier_needs_it_unless_it_is_stated() {
+    let winding = |rectifier| {
+        let transformer = "wound_for_v = 220, secondary_v = 350, source_ohm = 90";
+        Supply { transformer, rectifier, ..PLAIN }.circuit().transformer.winding
+    };
+    assert_eq!(winding("circuit = 'full-wave', device = 'silicon'"), Winding::CentreTapped);
+    assert_eq!(winding("circuit = 'half-wave', device = 'silicon'"), Winding::Single);
+}
+
+#[test]
 fn an_open_circuit_reading_is_brought_to_the_winding_s_own_mains() {
     // By hand: 357 V at 224 V is 350.625 V at 220 V; two readings within 1 % are √2 % of doubt.
     let t =
@@ -186,7 +196,6 @@ fn a_transformer_stated_twice_or_by_halves_is_told_so() {
     let complaints = |stated| Supply { transformer: stated, ..PLAIN }.complaints();
     assert_snapshot!(complaints(""), @r#"
 f:4: [amplifier.transformer]: wound_for_v is missing; expected for example wound_for_v = 230
-f:4: [amplifier.transformer]: winding is missing; expected for example winding = "single"
 f:4: [amplifier.transformer]: the secondary's voltage is missing; expected secondary_v = 350 (open-circuit at wound_for_v), open_v with at_mains_v, or label_v with label_ma
 "#);
     assert_snapshot!(complaints("wound_for_v = 220, winding = 'single', secondary_v = 350"), @r#"

@@ -2,14 +2,14 @@
 
 use super::filter::{DROPPER, FILTER, read_dropper, read_filter};
 use super::loads::{HEATER, LOAD, OUTPUT, node_index, read_heater, read_load, read_output};
-use super::rectifier::{RECTIFIER, is_doubler, read_cold_start, read_rectifier};
+use super::rectifier::{RECTIFIER, is_doubler, read_cold_start, read_rectifier, usual_winding};
 use super::references::expect_known;
 use super::site::{ColdStart, MeasuredSupply, OutputStage, Standby};
 use super::table::Table;
 use super::transformer::{TRANSFORMER, read_transformer};
 use super::unlikely;
 use super::valves::output_valve;
-use crate::supply::{Circuit, MainsWave};
+use crate::supply::{Circuit, MainsWave, Winding};
 
 /// What a circuit takes from the site.
 pub(super) struct SiteMains {
@@ -59,7 +59,8 @@ pub(super) fn read_supply<'a>(
     }
 
     let tables = FullWay::open(amplifier);
-    let transformer = tables.transformer.and_then(|table| read_transformer(table, mains.frequency_hz));
+    let usual = tables.rectifier.map_or(Winding::Single, usual_winding);
+    let transformer = tables.transformer.and_then(|table| read_transformer(table, mains.frequency_hz, usual));
     let winding = transformer.as_ref().map(|transformer| transformer.winding);
     let rectifier = tables.rectifier.and_then(|table| read_rectifier(table, winding));
     let filter = read_filter(&tables.filter, tables.rectifier.is_some_and(is_doubler));

@@ -118,7 +118,12 @@ impl<'a> Notes<'a> {
 
     /// Notes a value that is possible but unlikely, and why.
     pub(super) fn warn(&self, span: Span, why: impl Into<String>) {
-        let warning = self.complaint(span, self.quote(span), why.into());
+        self.warn_of(span, self.quote(span), why);
+    }
+
+    /// The same under a heading of the caller's own.
+    pub(super) fn warn_of(&self, span: Span, found: impl Into<String>, why: impl Into<String>) {
+        let warning = self.complaint(span, found.into(), why.into());
         self.warnings.borrow_mut().push(warning);
     }
 

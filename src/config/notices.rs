@@ -79,28 +79,26 @@ fn read_receiver(table: Table<'_>, folder: &Path) -> Option<Receiver> {
         && !is_loopback(url)
     {
         let why = "the token goes over the network in the clear; https:// would hide it";
-        table.notes().warn(table.key("webhook").span(), why);
+        table.notes().warn_of(table.key("webhook").span(), "webhook", why);
     }
     Some(Receiver { name: name?.value, route: Route::Webhook { url: url?, token }, min_priority })
 }
 
-/// A web address with a host and without a password in it.
+/// A web address with a host and without a password in it. It is never quoted: many a webhook's address is a secret
+/// itself.
 fn read_url(table: Table<'_>) -> Option<String> {
     let entry = table.need("webhook");
     let url = entry.text()?.value;
     let host = host(&url).filter(|host| !host.is_empty() && !url.contains(char::is_whitespace));
-    match host {
-        None => entry.refuse("expected an address such as \"https://notices.example/hall\""),
+    let says = match host {
+        None => "expected an address such as \"https://notices.example/hall\"",
         Some(host) if host.contains('@') => {
-            table.notes().complain_of(
-                entry.span(),
-                "webhook",
-                "a user and password never stand in this file; use token_file or token_env",
-            );
-            None
+            "a user and password never stand in this file; use token_file or token_env"
         }
-        Some(_) => Some(url),
-    }
+        Some(_) => return Some(url),
+    };
+    table.notes().complain_of(entry.span(), "webhook", says);
+    None
 }
 
 /// What stands between `http://` or `https://` and the path.

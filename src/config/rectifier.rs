@@ -40,6 +40,11 @@ pub(super) fn is_doubler(table: Table<'_>) -> bool {
     table.key("circuit").peek() == Some("doubler")
 }
 
+/// The winding that the table's wiring needs.
+pub(super) fn usual_winding(table: Table<'_>) -> Winding {
+    if table.key("circuit").peek() == Some("full-wave") { Winding::CentreTapped } else { Winding::Single }
+}
+
 /// Reads wiring and device; `winding` is the transformer's, where that is known.
 pub(super) fn read_rectifier(table: Table<'_>, winding: Option<Winding>) -> Option<ReadRectifier> {
     let circuit = table.need("circuit").word(&CIRCUITS);

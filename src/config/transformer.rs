@@ -47,14 +47,18 @@ const USUAL_REGULATION_DOUBT: f64 = 0.5;
 const USUAL_REGULATION: [(f64, f64); 6] =
     [(30.0, 0.16), (50.0, 0.13), (120.0, 0.09), (225.0, 0.08), (300.0, 0.07), (500.0, 0.05)];
 
-/// The transformer; `site_hz` is what it is wound for where nothing else is said.
-pub(super) fn read_transformer(table: Table<'_>, site_hz: f64) -> Option<Transformer> {
+/// The transformer; `site_hz` and `usual_winding` are what it is wound for and how, where nothing else is said.
+pub(super) fn read_transformer(
+    table: Table<'_>,
+    site_hz: f64,
+    usual_winding: Winding,
+) -> Option<Transformer> {
     let wound_for = table.need("wound_for_v").number(MAINS_V);
     let wound_for_v = wound_for.unwrap_or(230.0);
     let wound_for_hz = table.key("wound_for_hz").number(Bounds::Within(40.0, 70.0)).unwrap_or(site_hz);
     let taps_v = read_taps(table, wound_for);
     let windings = [("single", Winding::Single), ("centre-tapped", Winding::CentreTapped)];
-    let winding = table.need("winding").word(&windings);
+    let winding = table.key("winding").word(&windings).unwrap_or(usual_winding);
     let leakage_mh = table.key("leakage_mh").number(Bounds::Within(0.0, 10_000.0)).unwrap_or(0.0);
     refuse_strays(table);
     let meter = Meter {
@@ -68,7 +72,7 @@ pub(super) fn read_transformer(table: Table<'_>, site_hz: f64) -> Option<Transfo
         wound_for_hz,
         taps_v: taps_v?,
         secondary_v: secondary_v?,
-        winding: winding?,
+        winding,
         source_ohm: source_ohm?,
         leakage_h: leakage_mh / 1000.0,
     })
