@@ -4,9 +4,11 @@
 //! [`FromLogger`] after the other over a bounded channel, is all that the rest of the house sees.
 
 mod decode;
+mod port;
 mod tide;
 
 pub use decode::Decoder;
+pub use port::{PortHandle, StillHanging, back_off, spawn};
 pub use tide::{
     MAX_CHANNEL_NAME, MAX_LINE, Pairs, TideLine, Unreadable, Unwritable, Value, crc16, write_line,
 };
