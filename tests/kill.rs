@@ -48,7 +48,10 @@ fn a_daemon_killed_at_random_moments_under_load_loses_nothing_that_was_committed
         daemon.kill();
         if committed > 0 {
             let found = bench.count("SELECT count(*) FROM open").expect("the record opens after a kill");
-            assert!(found >= committed, "round {round} (seed {seed}): {found} of {committed} committed readings");
+            assert!(
+                found >= committed,
+                "round {round} (seed {seed}): {found} of {committed} committed readings"
+            );
             assert!(found >= known, "round {round} (seed {seed}): {found} after {known} before");
             known = found;
         }
@@ -70,8 +73,11 @@ fn a_daemon_killed_at_random_moments_under_load_loses_nothing_that_was_committed
 
     // The journal's numbers have no gap, and a rail-high is never raised while it stands.
     let mut entries = record.prepare("SELECT seq, condition, event FROM journal ORDER BY seq").unwrap();
-    let rows: Vec<(i64, String, String)> =
-        entries.query_map([], |r| Ok((r.get(0)?, r.get(1)?, r.get(2)?))).unwrap().map(Result::unwrap).collect();
+    let rows: Vec<(i64, String, String)> = entries
+        .query_map([], |r| Ok((r.get(0)?, r.get(1)?, r.get(2)?)))
+        .unwrap()
+        .map(Result::unwrap)
+        .collect();
     let mut raised = false;
     let mut raises = 0;
     for (i, (seq, condition, event)) in rows.iter().enumerate() {
@@ -98,6 +104,11 @@ fn a_daemon_killed_at_random_moments_under_load_loses_nothing_that_was_committed
     let notices = bench.count("SELECT count(*) FROM outbox").unwrap();
     assert_eq!(arrived.len() as i64, notices, "each notice arrived, and nothing that isn't in the outbox");
     let repeats: usize = arrived.values().map(|times| times - 1).sum();
-    println!("{kills} kills, {known} readings, {raises} raised, {notices} notices, {repeats} sent again by a restart");
-    assert!(repeats as u32 <= kills, "a notice is repeated only by the restart that fell between answer and commit");
+    println!(
+        "{kills} kills, {known} readings, {raises} raised, {notices} notices, {repeats} sent again by a restart"
+    );
+    assert!(
+        repeats as u32 <= kills,
+        "a notice is repeated only by the restart that fell between answer and commit"
+    );
 }

@@ -3,7 +3,8 @@
 
 use std::time::Duration;
 
-use super::{Facts, Figures, Priority, RailFigures, Side};
+use super::{Facts, Figures, PartFigures, Priority, RailFigures, Side};
+use crate::supply::Loading;
 
 /// One row: what is watched for, and how.
 pub struct Condition {
@@ -67,6 +68,91 @@ pub const CONDITIONS: &[Condition] = &[
         judge: rail_high,
     },
     Condition {
+        name: "dissipation-high",
+        meaning: "the output valves dissipate more at idle than their sheet allows, by the projected rail and the \
+                  law of their bias",
+        priority: Priority::Medium,
+        side: Side::Over,
+        deadband: 0.5,
+        unit: "W",
+        on_delay: seconds(60),
+        off_delay: seconds(60),
+        advice: "Switch the amplifier off until the mains has come down, and have the idle current measured and set \
+                 again by somebody trained.",
+        set_in: "[amplifier.output] type, idle_ma_each, bias",
+        judge: |figures| parts(&figures.dissipations, "W", Loading::Idle.word()),
+    },
+    Condition {
+        name: "unloaded-high",
+        meaning: "if the amplifier were switched on cold now, its rail would pass what a capacitor bears before the \
+                  valves draw",
+        priority: Priority::Medium,
+        side: Side::Over,
+        deadband: 4.0,
+        unit: "V",
+        on_delay: seconds(60),
+        off_delay: seconds(60),
+        advice: "Do not switch the amplifier on, nor to standby, until the mains has come down.",
+        set_in: "[[amplifier.filter]] rated_v, [amplifier.rectifier] standby",
+        judge: |figures| parts(&figures.unloaded, "V", Loading::Unloaded.word()),
+    },
+    Condition {
+        name: "heater-high",
+        meaning: "the heaters' voltage, projected from mains, is over its tolerance",
+        priority: Priority::Medium,
+        side: Side::Over,
+        deadband: 0.05,
+        unit: "V",
+        on_delay: seconds(600),
+        off_delay: seconds(60),
+        advice: "Valves last less long like this. If it comes back, another primary tap or a bucking winding cures \
+                 rail and heaters together; a dropper in the rail does nothing for the heaters.",
+        set_in: "[amplifier.heater] nominal_v, tolerance_pct",
+        judge: |figures| parts(&figures.heaters, "V", ""),
+    },
+    Condition {
+        name: "heater-low",
+        meaning: "the heaters' voltage, projected from mains, is under its tolerance",
+        priority: Priority::Low,
+        side: Side::Under,
+        deadband: 0.05,
+        unit: "V",
+        on_delay: seconds(600),
+        off_delay: seconds(60),
+        advice: "Low emission, and with full B+ possible cathode damage: switch off until the mains has recovered.",
+        set_in: "[amplifier.heater] nominal_v, tolerance_pct",
+        judge: |figures| parts(&figures.heaters_low, "V", ""),
+    },
+    Condition {
+        name: "core-high",
+        meaning: "the transformer's core is driven more than 6 % over what it was wound for",
+        priority: Priority::Low,
+        side: Side::Over,
+        deadband: 0.005,
+        unit: "times what it was wound for",
+        on_delay: seconds(600),
+        off_delay: seconds(60),
+        advice: "The transformer runs hotter and draws more magnetising current. No dropper in the rail helps the \
+                 core: another primary tap or a bucking winding does.",
+        set_in: "[amplifier.transformer] wound_for_v, wound_for_hz",
+        judge: |figures| parts(&figures.cores, "times what it was wound for", ""),
+    },
+    Condition {
+        name: "apart",
+        meaning: "a measured rail lies outside what its projection allows, from full to idle, by more than both \
+                  uncertainties",
+        priority: Priority::Medium,
+        side: Side::Over,
+        deadband: 2.0,
+        unit: "V",
+        on_delay: seconds(600),
+        off_delay: seconds(60),
+        advice: "Something in the supply has changed (a valve, the rectifier, a fitted dropper), or the config no \
+                 longer describes it. Switch off and have it measured by somebody trained.",
+        set_in: "[amplifier.transformer] and the rest of the supply, or `railtide fit`",
+        judge: |figures| parts(&figures.apart, "V", ""),
+    },
+    Condition {
         name: "logger-silent",
         meaning: "no good line has come from a logger for too long: nothing is being watched",
         priority: Priority::Medium,
@@ -125,6 +211,30 @@ fn judge_rail(rail: &RailFigures, mains_v: Option<f64>) -> Option<Judged> {
     })
 }
 
+/// Judges the figures of parts as they stand.
+fn parts(parts: &[PartFigures], unit: &str, loading: &str) -> Vec<Judged> {
+    parts
+        .iter()
+        .map(|part| Judged {
+            subject: part.subject.clone(),
+            value: part.value,
+            setpoint: part.setpoint,
+            suppressed: part.suppressed,
+            facts: Facts {
+                value: part.value,
+                value_u: part.u,
+                setpoint: Some(part.setpoint),
+                limit: part.limit,
+                unit: unit.to_owned(),
+                source: "projected".to_owned(),
+                loading: loading.to_owned(),
+                note: part.note.clone(),
+                ..Facts::default()
+            },
+        })
+        .collect()
+}
+
 fn logger_silent(figures: &Figures) -> Vec<Judged> {
     figures
         .loggers
@@ -153,7 +263,7 @@ fn logger_silent(figures: &Figures) -> Vec<Judged> {
 mod tests {
     use super::*;
     use crate::quantity::Uncertain;
-    use crate::supply::{Basis, Loading};
+    use crate::supply::Basis;
 
     fn rail(projected: Option<f64>, measured: Option<f64>) -> Figures {
         let rail = RailFigures {

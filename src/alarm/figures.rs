@@ -14,6 +14,37 @@ pub struct Figures {
     pub loggers: Vec<LoggerFigures>,
     /// Each limit on a rail, in the config's order.
     pub rails: Vec<RailFigures>,
+    /// Each amplifier's heater winding, V.
+    pub heaters: Vec<PartFigures>,
+    /// Each amplifier's heater winding from below, V.
+    pub heaters_low: Vec<PartFigures>,
+    /// Each transformer core: mains over wound-for, times wound-for hertz over real hertz.
+    pub cores: Vec<PartFigures>,
+    /// Each output stage: anode dissipation of one valve at idle, W.
+    pub dissipations: Vec<PartFigures>,
+    /// Each capacitor that meets the unloaded rail: that rail if the amplifier were switched on cold now, V.
+    pub unloaded: Vec<PartFigures>,
+    /// Each measured rail that can be projected: how far it lies outside the band from full to idle, V.
+    pub apart: Vec<PartFigures>,
+}
+
+/// A figure of a supply's parts that follows mains, against its own limit.
+#[derive(Clone, Debug, PartialEq, serde::Serialize)]
+pub struct PartFigures {
+    /// What it is about: an amplifier, or an amplifier and a node.
+    pub subject: String,
+    /// The figure now; `None` while mains (or the measured rail) is unknown.
+    pub value: Option<f64>,
+    /// Its expanded uncertainty (k = 2).
+    pub u: Option<f64>,
+    /// What it is judged against.
+    pub setpoint: f64,
+    /// The limit that the setpoint protects, where it is another figure.
+    pub limit: Option<f64>,
+    /// Whether it has no meaning now: the amplifier is proved to be off.
+    pub suppressed: bool,
+    /// What else there is to say.
+    pub note: String,
 }
 
 /// How one logger does.

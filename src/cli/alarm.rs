@@ -87,7 +87,9 @@ fn find(site: &Site, word: &str) -> anyhow::Result<AlarmKey> {
         alarms.iter().filter(|a| a.key.condition == word && a.state != crate::alarm::State::Normal);
     match (of_condition.next(), of_condition.next()) {
         (Some(only), None) => Ok(only.key.clone()),
-        (Some(_), Some(_)) => bail!("several alarms are of condition {word}; name one as `railtide alarm` lists it"),
+        (Some(_), Some(_)) => {
+            bail!("several alarms are of condition {word}; name one as `railtide alarm` lists it")
+        }
         (None, _) => bail!("there is no alarm {word}; `railtide alarm list --all` names those there are"),
     }
 }

@@ -91,9 +91,9 @@ pub fn main() -> ExitCode {
 }
 
 fn is_broken_pipe(error: &anyhow::Error) -> bool {
-    error.chain().any(|cause| {
-        cause.downcast_ref::<io::Error>().is_some_and(|e| e.kind() == io::ErrorKind::BrokenPipe)
-    })
+    error
+        .chain()
+        .any(|cause| cause.downcast_ref::<io::Error>().is_some_and(|e| e.kind() == io::ErrorKind::BrokenPipe))
 }
 
 /// Prints `text` as it is.
@@ -125,5 +125,9 @@ fn start_logging() {
         .with_ansi(io::stderr().is_terminal())
         .with_target(false);
     // A second call (from a test in one process) keeps the first.
-    let _ = if std::env::var_os("JOURNAL_STREAM").is_some() { layer.without_time().try_init() } else { layer.try_init() };
+    let _ = if std::env::var_os("JOURNAL_STREAM").is_some() {
+        layer.without_time().try_init()
+    } else {
+        layer.try_init()
+    };
 }

@@ -20,9 +20,8 @@ pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
         std::fs::read(&file).with_context(|| format!("the config file {} can't be read", file.display()))?;
     let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
     let surroundings = Surroundings { conditions: &conditions, default_store: default_store() };
-    Site::parse_bytes(&bytes, &file, &surroundings).map_err(|complaints| {
-        anyhow::anyhow!("the config has mistakes, and nothing was done:\n{complaints}")
-    })
+    Site::parse_bytes(&bytes, &file, &surroundings)
+        .map_err(|complaints| anyhow::anyhow!("the config has mistakes, and nothing was done:\n{complaints}"))
 }
 
 /// Where the record is when `[store]` names no path: the user's data folder.

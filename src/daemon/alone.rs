@@ -1,9 +1,9 @@
 //! A request with no daemon running: the command holds the lock and does what the daemon would.
 
+use crate::alarm::Request;
 use crate::clock::Clock;
 use crate::config::Site;
 use crate::store::{Batch, Lock, OpenOptions, Store, StoreError};
-use crate::alarm::Request;
 use crate::watch::{Answer, Watch};
 
 /// Applies one request through [`Watch`] and commits it. Its notices wait in the outbox for the next run.

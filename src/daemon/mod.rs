@@ -11,11 +11,11 @@ mod walk;
 use std::future::Future;
 use std::time::Duration;
 
-use tokio::sync::{mpsc, watch as flag};
+use tokio::sync::mpsc;
 
 use crate::clock::{Clock, TimeBase};
 use crate::config::Site;
-use crate::logger;
+use crate::logger::{self, PortHandle};
 use crate::notice::{NoticeError, Waiting, Worker};
 use crate::store::{self, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
@@ -40,8 +40,13 @@ pub enum DaemonError {
     /// A receiver couldn't be set up.
     #[error(transparent)]
     Notice(#[from] NoticeError),
+    /// The system gave no thread for a port.
+    #[error("no thread could be started for a logger's port: {0}")]
+    Thread(#[from] std::io::Error),
     /// The config names no logger, so there is nothing to read.
-    #[error("the config names no [[logger]], so there is nothing to run; add one, or use the commands that need none")]
+    #[error(
+        "the config names no [[logger]], so there is nothing to run; add one, or use the commands that need none"
+    )]
     NoLogger,
 }
 
@@ -65,14 +70,13 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let worker = Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcome_tx)?;
     worker.send(restored.undelivered.into_iter().map(waiting_again).collect());
 
-    let (stop_tx, stop_rx) = flag::channel(false);
     let (event_tx, mut events) = mpsc::channel(LOGGER_QUEUE);
     let ports: Vec<_> = site
         .loggers
         .iter()
         .enumerate()
-        .map(|(i, settings)| logger::spawn(i, settings, clock.clone(), event_tx.clone(), stop_rx.clone()))
-        .collect();
+        .map(|(i, settings)| logger::spawn(i, settings, clock.clone(), event_tx.clone()))
+        .collect::<Result<_, _>>()?;
     drop(event_tx);
     tracing::info!(database = %site.store.path.display(), "railtide is watching {}", site.name);
 
@@ -93,13 +97,16 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     }
 
     tracing::info!("stopping: committing what is held");
-    // Nobody listens any more: a receiver that hung up would only be told so.
-    let _ = stop_tx.send(true);
-    while let Some(event) = events.recv().await {
-        walk.from_logger(event);
+    // A port's thread may be waiting for room in the queue, so it's emptied while they stop.
+    let mut stopped = tokio::task::spawn_blocking(move || stop_ports(ports));
+    loop {
+        tokio::select! {
+            Some(event) = events.recv() => walk.from_logger(event),
+            _ = &mut stopped => break,
+        }
     }
-    for port in ports {
-        port.join().await;
+    while let Ok(event) = events.try_recv() {
+        walk.from_logger(event);
     }
     let (mut held, mut store, worker) = walk.finish();
     let stopped = worker.stop();
@@ -123,6 +130,14 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
 
 fn projectors(site: &Site) -> Vec<Option<Projector>> {
     site.amplifiers.iter().map(projector).collect()
+}
+
+fn stop_ports(ports: Vec<PortHandle>) {
+    for port in ports {
+        if let Err(hanging) = port.stop() {
+            tracing::warn!("{hanging}");
+        }
+    }
 }
 
 /// A notice that an earlier run did not get delivered.

@@ -85,7 +85,9 @@ impl Walk {
             LoggerEvent::Restarted => {
                 tracing::info!(logger = self.logger_names[logger], "the logger has started again");
             }
-            LoggerEvent::ReadHangs => self.log_fault(logger, "a read from its port has not returned; look at the adapter"),
+            LoggerEvent::ReadHangs => {
+                self.log_fault(logger, "a read from its port has not returned; look at the adapter")
+            }
         }
     }
 
@@ -132,7 +134,8 @@ impl Walk {
                 notices.iter_mut().for_each(|notice| notice.recorded = false);
             }
         }
-        self.notices.send(notices.into_iter().map(|notice| Waiting { notice, attempts: 0, body: None }).collect());
+        self.notices
+            .send(notices.into_iter().map(|notice| Waiting { notice, attempts: 0, body: None }).collect());
     }
 
     fn commit(&mut self) -> bool {
@@ -202,7 +205,10 @@ impl Walk {
         let name = &self.logger_names[logger];
         let now = self.clock.now().mono;
         if let Some(times) = self.hush.note(&format!("logger {name}: {what}"), now) {
-            tracing::warn!("logger {name}: {what}{}", if times > 1 { format!(" ({times} times)") } else { String::new() });
+            tracing::warn!(
+                "logger {name}: {what}{}",
+                if times > 1 { format!(" ({times} times)") } else { String::new() }
+            );
         }
     }
 
@@ -218,16 +224,23 @@ impl Walk {
 
 fn log_transition(entry: &JournalEntry) {
     let facts = &entry.facts;
-    let line = format!(
-        "{} is {} (it was {})",
-        entry.key,
-        entry.to.word(),
-        entry.from.word(),
-    );
+    let line = format!("{} is {} (it was {})", entry.key, entry.to.word(), entry.from.word(),);
     match entry.to {
         State::Unacknowledged => {
-            tracing::warn!(seq = entry.seq, value = facts.value, setpoint = facts.setpoint, unit = facts.unit, "{line}");
+            tracing::warn!(
+                seq = entry.seq,
+                value = facts.value,
+                setpoint = facts.setpoint,
+                unit = facts.unit,
+                "{line}"
+            );
         }
-        _ => tracing::info!(seq = entry.seq, value = facts.value, setpoint = facts.setpoint, unit = facts.unit, "{line}"),
+        _ => tracing::info!(
+            seq = entry.seq,
+            value = facts.value,
+            setpoint = facts.setpoint,
+            unit = facts.unit,
+            "{line}"
+        ),
     }
 }

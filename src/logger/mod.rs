@@ -82,3 +82,24 @@ pub enum LineFault {
     /// A line that had been read already: the same sequence number and milliseconds as the one before.
     Duplicate,
 }
+
+impl LineFault {
+    /// What it means, for the log.
+    pub fn sentence(self) -> &'static str {
+        match self {
+            LineFault::Garbage => "bytes that are no line were skipped; is the baud rate right?",
+            LineFault::TooLong => "a line longer than any may be was skipped",
+            LineFault::Checksum => {
+                "a line with a wrong check sum was skipped; look at cable and earthing if it goes on"
+            }
+            LineFault::Malformed => {
+                "a line with a right check sum that is no tide line was skipped; look at the firmware"
+            }
+            LineFault::UnknownChannel => {
+                "it sends a channel that the config doesn't name; its value was skipped"
+            }
+            LineFault::BadValue => "a value that is no possible figure was skipped",
+            LineFault::Duplicate => "a line came twice; the second was skipped",
+        }
+    }
+}

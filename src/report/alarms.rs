@@ -44,7 +44,8 @@ pub struct AlarmLine {
 impl AlarmList {
     /// The list of `records` at `now`; alarms that are normal are left out unless `with_normal`.
     pub fn new(records: &[AlarmRecord], with_normal: bool, zone: Tz, now: Utc) -> Self {
-        let mut records: Vec<_> = records.iter().filter(|r| with_normal || r.state != State::Normal).collect();
+        let mut records: Vec<_> =
+            records.iter().filter(|r| with_normal || r.state != State::Normal).collect();
         records.sort_by_key(|r| (rank(r.state), r.priority, r.key.clone()));
         let alarms = records
             .into_iter()
@@ -112,7 +113,9 @@ fn facts_phrase(facts: &Facts) -> Option<String> {
     }
     let mut how = Vec::new();
     match (facts.source.as_str(), facts.mains_v) {
-        ("projected", Some(mains_v)) => how.push(format!("projected from mains {mains_v:.1} V, {}", facts.loading)),
+        ("projected", Some(mains_v)) => {
+            how.push(format!("projected from mains {mains_v:.1} V, {}", facts.loading))
+        }
         ("", _) => {}
         (source, Some(mains_v)) => how.push(format!("{source}, mains {mains_v:.1} V")),
         (source, None) => how.push(source.to_owned()),

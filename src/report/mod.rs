@@ -12,7 +12,7 @@ mod when;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
-pub use when::{local_time, rfc3339};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;
+pub use when::{local_time, rfc3339};

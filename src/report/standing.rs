@@ -167,7 +167,11 @@ pub fn standing_text(standing: &Standing, now: Utc, out: &mut impl fmt::Write) -
                     Some(quality) if quality != Quality::Good => write!(out, ", {}", quality.word())?,
                     _ => {}
                 }
-                writeln!(out, "{})", if channel.fresh { "" } else { "; too old or doubtful to project from" })?;
+                writeln!(
+                    out,
+                    "{})",
+                    if channel.fresh { "" } else { "; too old or doubtful to project from" }
+                )?;
             }
             _ => writeln!(out, "no reading yet")?,
         }
@@ -191,7 +195,9 @@ fn rail_sentence(rail: &RailStanding) -> String {
         )
     };
     let mut sentences = Vec::new();
-    if let (Some(v), Some(u), Some(setpoint_v)) = (rail.measured_v, rail.measured_u_v, rail.measured_setpoint_v) {
+    if let (Some(v), Some(u), Some(setpoint_v)) =
+        (rail.measured_v, rail.measured_u_v, rail.measured_setpoint_v)
+    {
         sentences.push(match rail.proved_on {
             Some(false) => format!("{name} measures {}: the amplifier is off", Uncertain::new(v, u)),
             _ => format!("{name} stands at {} (measured), {}", Uncertain::new(v, u), against(v, setpoint_v)),
@@ -200,13 +206,21 @@ fn rail_sentence(rail: &RailStanding) -> String {
     sentences.push(match (rail.projected_v, rail.projected_u_v, rail.projected_setpoint_v) {
         (Some(v), Some(u), Some(setpoint_v)) => {
             let verb = if rail.proved_on == Some(true) { "is projected" } else { "would stand" };
-            format!("{name} {verb} at {} ({}), {}", Uncertain::new(v, u), rail.loading, against(v, setpoint_v))
+            format!(
+                "{name} {verb} at {} ({}), {}",
+                Uncertain::new(v, u),
+                rail.loading,
+                against(v, setpoint_v)
+            )
         }
         (None, _, Some(setpoint_v)) => format!(
             "{name}: unknown, since mains is; its setpoint of {setpoint_v:.0} V is reached at {}",
             rail.setpoint_at_mains_v.map_or("no likely mains".to_owned(), |m| format!("{m:.1} V of mains"))
         ),
-        _ => format!("{name} at loading {}: unknown, since the config doesn't say how it follows mains", rail.loading),
+        _ => format!(
+            "{name} at loading {}: unknown, since the config doesn't say how it follows mains",
+            rail.loading
+        ),
     });
     sentences.join(".\n") + "."
 }

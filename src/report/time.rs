@@ -66,7 +66,10 @@ mod tests {
     #[test]
     fn spans_are_said_in_the_units_that_matter() {
         let said = |s| span(Duration::from_secs(s));
-        assert_eq!([said(7), said(250), said(240), said(11_100)], ["7 s", "4 min 10 s", "4 min", "3 h 5 min"]);
+        assert_eq!(
+            [said(7), said(250), said(240), said(11_100)],
+            ["7 s", "4 min 10 s", "4 min", "3 h 5 min"]
+        );
         assert_eq!([said(86_400), said(187_200)], ["1 day", "2 days 4 h"]);
     }
 

@@ -107,7 +107,9 @@ fn limit_sentence(rail: &RailWatch) -> String {
     let mut parts = Vec::new();
     match &rail.projection {
         Some(p) => {
-            let at = |mains: Option<f64>| mains.map_or("no likely mains".to_owned(), |v| format!("{v:.1} V of mains"));
+            let at = |mains: Option<f64>| {
+                mains.map_or("no likely mains".to_owned(), |v| format!("{v:.1} V of mains"))
+            };
             parts.push(format!(
                 "projected at {}, it is reached at {}; the alarm's setpoint is {:.0} V (less its uncertainty), reached at {}",
                 limit.loading.word(),

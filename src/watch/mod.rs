@@ -6,10 +6,12 @@
 
 mod channel;
 mod ledger;
+mod parts;
 mod rail;
 
 pub use channel::{fresh_for, uncertain};
-pub use rail::{Projection, RailWatch, mains_channel, rail_watches};
+pub use parts::{CapacitorWatch, PartWatch};
+pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches};
 
 use std::time::Duration;
 
@@ -66,6 +68,7 @@ pub struct Watch {
     loggers: Vec<WatchedLogger>,
     channels: Vec<WatchedChannel>,
     rails: Vec<RailWatch>,
+    parts: Vec<PartWatch>,
     ledger: Ledger,
 }
 
@@ -121,6 +124,7 @@ impl Watch {
             loggers,
             channels,
             rails: rail_watches(site, projectors),
+            parts: part_watches(site, projectors),
             ledger: Ledger::new(site, restored),
         }
     }
@@ -167,7 +171,8 @@ impl Watch {
     /// The present figures of everything that is watched.
     pub fn figures(&self, now: Mono) -> Figures {
         let mains = self.mains_channel.and_then(|i| self.channels[i].fresh(now));
-        Figures {
+        let fresh = |i: usize| self.channels[i].fresh(now);
+        let mut figures = Figures {
             mains,
             loggers: self
                 .loggers
@@ -179,12 +184,13 @@ impl Watch {
                     disconnected: logger.disconnected.clone(),
                 })
                 .collect(),
-            rails: self
-                .rails
-                .iter()
-                .map(|rail| rail.figures(mains, |i| self.channels[i].fresh(now)))
-                .collect(),
+            rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
+            ..Figures::default()
+        };
+        for part in &self.parts {
+            part.add_figures(mains, fresh, &mut figures);
         }
+        figures
     }
 
     /// Every alarm as it stands.

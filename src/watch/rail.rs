@@ -6,6 +6,7 @@ use crate::quantity::{Uncertain, rectangular_u};
 use crate::supply::{Basis, Projector, RailCurve};
 
 use super::channel::uncertain;
+use super::parts::PartWatch;
 
 /// A design-centre figure already allows for mains 10 % over nominal (from memory; handbook of rating systems), so
 /// at any one moment the rail may stand that much over it.
@@ -60,6 +61,30 @@ pub fn rail_watches(site: &Site, projectors: &[Option<Projector>]) -> Vec<RailWa
         .collect()
 }
 
+/// The parts of every amplifier, in the config's order.
+pub fn part_watches(site: &Site, projectors: &[Option<Projector>]) -> Vec<PartWatch> {
+    let channels: Vec<&Channel> = site.channels().map(|(_, channel)| channel).collect();
+    site.amplifiers
+        .iter()
+        .zip(projectors)
+        .map(|(amplifier, projector)| {
+            let rails = rails_of(amplifier, &channels);
+            PartWatch::new(amplifier, projector.as_ref(), &rails, site.declared_v, site.guard_band)
+        })
+        .collect()
+}
+
+/// (channel index, node) of every channel that measures a rail of `amplifier`.
+fn rails_of<'c>(amplifier: &Amplifier, channels: &[&'c Channel]) -> Vec<(usize, &'c str)> {
+    channels
+        .iter()
+        .enumerate()
+        .filter_map(|(i, channel)| Some((i, channel.rail.as_ref()?)))
+        .filter(|(_, rail)| rail.amplifier == amplifier.name)
+        .map(|(i, rail)| (i, rail.node.as_str()))
+        .collect()
+}
+
 /// The index, over the whole site, of the channel that the projections follow: the first mains channel.
 pub fn mains_channel(site: &Site) -> Option<usize> {
     site.channels().position(|(_, c)| c.rail.is_none())
@@ -95,13 +120,7 @@ fn rail_watch(
             setpoint_at_mains_v,
         })
     });
-    let rails: Vec<(usize, &str)> = channels
-        .iter()
-        .enumerate()
-        .filter_map(|(i, channel)| Some((i, channel.rail.as_ref()?)))
-        .filter(|(_, rail)| rail.amplifier == amplifier.name)
-        .map(|(i, rail)| (i, rail.node.as_str()))
-        .collect();
+    let rails = rails_of(amplifier, channels);
     let measured = rails
         .iter()
         .find(|(_, node)| *node == limit.node)

@@ -87,7 +87,8 @@ fn through_a_bare_loop() -> Vec<Duration> {
         for line in BufReader::new(port).lines() {
             let Ok(body) = line else { return };
             let Ok(mut stream) = TcpStream::connect(&host) else { return };
-            let request = format!("POST / HTTP/1.1\r\nHost: {host}\r\nContent-Length: {}\r\n\r\n{body}", body.len());
+            let request =
+                format!("POST / HTTP/1.1\r\nHost: {host}\r\nContent-Length: {}\r\n\r\n{body}", body.len());
             if stream.write_all(request.as_bytes()).is_err() {
                 return;
             }
@@ -110,7 +111,12 @@ fn main() {
         delays.sort();
         let median = delays[delays.len() / 2];
         let p99 = delays[delays.len() * 99 / 100];
-        println!("{name:24} median {:7.2} ms   99 % {:7.2} ms   ({} rounds)", ms(median), ms(p99), delays.len());
+        println!(
+            "{name:24} median {:7.2} ms   99 % {:7.2} ms   ({} rounds)",
+            ms(median),
+            ms(p99),
+            delays.len()
+        );
         median
     };
     let bare = show("a bare loop", through_a_bare_loop());

@@ -1,38 +1,47 @@
 //! A bench for whole-program tests: a folder with a config, a pseudo-terminal that plays the logger, the built binary.
-#![allow(dead_code, reason = "each test program uses its own part of the bench")]
+#![allow(dead_code, unreachable_pub, reason = "each test program uses its own part of the bench")]
 
 pub mod receiver;
 
 use std::fmt::Write as _;
+use std::fs::File;
 use std::io::Write as _;
 use std::path::{Path, PathBuf};
 use std::process::{Child, Command, Output, Stdio};
 use std::time::{Duration, Instant};
-
-use serialport::{SerialPort, TTYPort};
 
 /// A state is waited for at most this long; generous, since timing never fails a test, only a state that never comes.
 pub const PATIENCE: Duration = Duration::from_secs(60);
 
 /// The pseudo-terminal's near end: what a logger's firmware would write to.
 pub struct Line {
-    near: TTYPort,
+    near: File,
     /// Held open so that the near end never sees a hang-up while nobody reads.
-    far: Option<TTYPort>,
+    _far: File,
+    device: PathBuf,
     seq: u32,
     started: Instant,
 }
 
 impl Line {
     pub fn new() -> Self {
-        let (near, mut far) = TTYPort::pair().expect("a pseudo-terminal");
-        far.set_exclusive(false).expect("a shared far end");
-        Line { near, far: Some(far), seq: 0, started: Instant::now() }
+        let ends = nix::pty::openpty(None, None).expect("a pseudo-terminal");
+        let mut raw = nix::sys::termios::tcgetattr(&ends.slave).expect("its settings");
+        nix::sys::termios::cfmakeraw(&mut raw);
+        nix::sys::termios::tcsetattr(&ends.slave, nix::sys::termios::SetArg::TCSANOW, &raw).expect("raw");
+        let device = nix::unistd::ttyname(&ends.slave).expect("a named far end");
+        Line {
+            near: File::from(ends.master),
+            _far: File::from(ends.slave),
+            device,
+            seq: 0,
+            started: Instant::now(),
+        }
     }
 
     /// The device that the daemon opens.
     pub fn device(&self) -> PathBuf {
-        self.far.as_ref().unwrap().name().expect("a named far end").into()
+        self.device.clone()
     }
 
     /// Sends one good line with the logger's own milliseconds.
@@ -61,7 +70,8 @@ pub struct Phone {
 
 impl Phone {
     pub fn start() -> Self {
-        let runtime = tokio::runtime::Builder::new_multi_thread().worker_threads(1).enable_all().build().unwrap();
+        let runtime =
+            tokio::runtime::Builder::new_multi_thread().worker_threads(1).enable_all().build().unwrap();
         let receiver = runtime.block_on(receiver::TestReceiver::start(receiver::Mode::Ok));
         Phone { runtime, receiver }
     }
@@ -76,7 +86,12 @@ impl Phone {
 
     /// The notices that it took, in the order in which they came.
     pub fn notices(&self) -> Vec<serde_json::Value> {
-        self.receiver.requests().iter().filter(|request| request.taken).map(receiver::Recorded::json).collect()
+        self.receiver
+            .requests()
+            .iter()
+            .filter(|request| request.taken)
+            .map(receiver::Recorded::json)
+            .collect()
     }
 }
 
@@ -101,6 +116,14 @@ pub fn crc_ccitt_false(bytes: &[u8]) -> u16 {
 /// A folder of its own with a config, and commands run in it.
 pub struct Bench {
     pub folder: tempfile::TempDir,
+}
+
+impl Drop for Bench {
+    fn drop(&mut self) {
+        if std::thread::panicking() {
+            eprintln!("the daemon's log:\n{}", self.log());
+        }
+    }
 }
 
 impl Bench {
@@ -169,7 +192,9 @@ webhook = "{webhook}"
     }
 
     pub fn database(&self) -> PathBuf {
-        self.folder.path().join("hall.db")
+        let text = std::fs::read_to_string(self.config()).unwrap();
+        let disk = if text.contains("disk/hall.db") { "disk/hall.db" } else { "hall.db" };
+        self.folder.path().join(disk)
     }
 
     pub fn write_config(&self, text: &str) {
@@ -214,7 +239,12 @@ webhook = "{webhook}"
 
     pub fn start_with(&self, mut command: Command) -> Daemon {
         let log = std::fs::OpenOptions::new().create(true).append(true).open(self.log_file()).unwrap();
-        let child = command.stdin(Stdio::null()).stdout(Stdio::null()).stderr(log).spawn().expect("the daemon starts");
+        let child = command
+            .stdin(Stdio::null())
+            .stdout(Stdio::null())
+            .stderr(log)
+            .spawn()
+            .expect("the daemon starts");
         Daemon { child }
     }
 
@@ -260,7 +290,8 @@ impl Daemon {
 
     /// Sends a signal by its name (`TERM`, `INT`, `KILL`) to this process alone.
     pub fn signal(&self, name: &str) {
-        let status = Command::new("kill").arg(format!("-{name}")).arg(self.pid().to_string()).status().unwrap();
+        let status =
+            Command::new("kill").arg(format!("-{name}")).arg(self.pid().to_string()).status().unwrap();
         assert!(status.success(), "kill -{name}");
     }
 
