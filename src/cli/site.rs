@@ -30,6 +30,18 @@ fn default_store() -> PathBuf {
         .map_or_else(|_| PathBuf::from("railtide.db"), |user| user.data_dir().join("railtide/railtide.db"))
 }
 
+/// Makes the folder of the record if the config left its place to us; a place of the owner's choice is the owner's
+/// to make, since a missing disk must not be papered over.
+pub(super) fn make_default_folder(site: &Site) -> anyhow::Result<()> {
+    let default = default_store();
+    match default.parent() {
+        Some(folder) if site.store.path == default && !folder.as_os_str().is_empty() => {
+            std::fs::create_dir_all(folder).with_context(|| format!("the folder {} can't be made", folder.display()))
+        }
+        _ => Ok(()),
+    }
+}
+
 /// The record of a site, to read from; a sentence that helps where there's none yet.
 pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
     Ok(Store::open_read_only(&site.store.path)?)

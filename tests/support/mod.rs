@@ -29,6 +29,9 @@ impl Line {
         let mut raw = nix::sys::termios::tcgetattr(&ends.slave).expect("its settings");
         nix::sys::termios::cfmakeraw(&mut raw);
         nix::sys::termios::tcsetattr(&ends.slave, nix::sys::termios::SetArg::TCSANOW, &raw).expect("raw");
+        // A daemon that doesn't read must fail a test, not hang it.
+        let flags = nix::fcntl::FcntlArg::F_SETFL(nix::fcntl::OFlag::O_NONBLOCK);
+        nix::fcntl::fcntl(&ends.master, flags).expect("a non-blocking near end");
         let device = nix::unistd::ttyname(&ends.slave).expect("a named far end");
         Line {
             near: File::from(ends.master),
@@ -58,7 +61,15 @@ impl Line {
 
     /// Sends bytes as they are.
     pub fn raw(&mut self, bytes: &[u8]) {
-        self.near.write_all(bytes).expect("the pseudo-terminal takes bytes");
+        let mut rest = bytes;
+        wait_for("the pseudo-terminal takes bytes", || {
+            match self.near.write(rest) {
+                Ok(written) => rest = &rest[written..],
+                Err(full) if full.kind() == std::io::ErrorKind::WouldBlock => {}
+                Err(error) => panic!("the pseudo-terminal: {error}"),
+            }
+            rest.is_empty().then_some(())
+        });
     }
 }
 
