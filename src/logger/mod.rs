@@ -5,6 +5,8 @@
 
 mod decode;
 mod port;
+pub mod simulated;
+mod stop;
 mod tide;
 
 pub use decode::Decoder;
