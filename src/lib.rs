@@ -21,6 +21,7 @@
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
 //! | [`config`] | the TOML file into checked types | yes |
 //! | [`clock`] | the only place that reads a clock | no |
+//! | [`logger`] | serial ports, line formats, the simulated logger | no |
 
 pub mod alarm;
 pub mod clock;
