@@ -4,10 +4,16 @@
 //! [`FromLogger`] after the other over a bounded channel, is all that the rest of the house sees.
 
 mod decode;
+mod listening;
+mod listing;
 mod port;
+pub mod simulated;
+mod stop;
 mod tide;
 
 pub use decode::Decoder;
+pub use listening::{ChannelTally, Listening, Tally};
+pub use listing::{PortInfo, UsbDevice, ports};
 pub use port::{PortHandle, StillHanging, back_off, spawn};
 pub use tide::{
     MAX_CHANNEL_NAME, MAX_LINE, Pairs, TideLine, Unreadable, Unwritable, Value, crc16, write_line,

@@ -9,8 +9,8 @@ mod opening;
 mod reader;
 
 use std::path::PathBuf;
+use std::sync::Arc;
 use std::sync::atomic::{AtomicU64, Ordering};
-use std::sync::{Arc, Condvar, Mutex};
 use std::thread::{self, JoinHandle};
 use std::time::Duration;
 use std::{io, mem};
@@ -21,6 +21,7 @@ pub use self::opening::back_off;
 use self::opening::{Opener, open_port};
 use self::reader::{Outlet, Reader};
 use super::LoggerEvent;
+use super::stop::Stop;
 use crate::clock::Clock;
 use crate::config::LoggerSettings;
 use crate::quantity::Mono;
@@ -129,37 +130,6 @@ impl PortHandle {
 impl Drop for PortHandle {
     fn drop(&mut self) {
         self.stop.stop();
-    }
-}
-
-/// Tells threads to end, and wakes them if they wait for it.
-#[derive(Debug, Default)]
-struct Stop {
-    stopped: Mutex<bool>,
-    bell: Condvar,
-}
-
-impl Stop {
-    fn stop(&self) {
-        *self.stopped.lock().unwrap_or_else(|poisoned| poisoned.into_inner()) = true;
-        self.bell.notify_all();
-    }
-
-    fn is_stopped(&self) -> bool {
-        self.wait(Duration::ZERO)
-    }
-
-    /// Waits up to `span` for the stop; whether it came.
-    fn wait(&self, span: Duration) -> bool {
-        let stopped = self.stopped.lock().unwrap_or_else(|poisoned| poisoned.into_inner());
-        if *stopped || span.is_zero() {
-            return *stopped;
-        }
-        let (stopped, _) = self
-            .bell
-            .wait_timeout_while(stopped, span, |stopped| !*stopped)
-            .unwrap_or_else(|poisoned| poisoned.into_inner());
-        *stopped
     }
 }
 

@@ -9,9 +9,9 @@ use std::time::Duration;
 
 use tokio::sync::mpsc;
 
-use super::Stop;
 use super::opening::{Opener, back_off};
 use crate::clock::Clock;
+use crate::logger::stop::Stop;
 use crate::logger::{Decoder, FromLogger, LoggerEvent};
 
 /// How much one read takes: what the kernel's line discipline holds.
