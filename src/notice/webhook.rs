@@ -211,15 +211,16 @@ async fn beginning(mut response: Response) -> Vec<u8> {
     body
 }
 
-/// What of a body can be shown in one line.
+/// What of a body can be shown in one line; nothing if it isn't text.
 fn first_line(body: &[u8]) -> String {
     let text = String::from_utf8_lossy(body);
     let line = text.lines().map(str::trim).find(|line| !line.is_empty()).unwrap_or_default();
     let clean: String = line.chars().map(|c| if c.is_control() { ' ' } else { c }).collect();
-    match clean.char_indices().nth(SHOWN_CHARS) {
+    let shown = match clean.char_indices().nth(SHOWN_CHARS) {
         Some((end, _)) => format!("{}…", &clean[..end]),
         None => clean,
-    }
+    };
+    if shown.contains(char::REPLACEMENT_CHARACTER) { String::new() } else { shown.trim().to_owned() }
 }
 
 /// The library's own words say "error sending request"; the cause that helps a person lies beneath. The URL is left
@@ -356,7 +357,7 @@ mod tests {
     #[test]
     fn a_body_is_shown_as_one_short_clean_line() {
         assert_eq!(first_line(b"\r\n  no such \x1b[31mtopic\nsecond"), "no such  [31mtopic");
-        assert_eq!(first_line(&[0xff, 0xfe]), "\u{fffd}\u{fffd}");
+        assert_eq!(first_line(&[0x1f, 0x8b, 0xff, 0xfe]), "", "what isn't text isn't shown");
         assert_eq!(first_line("é".repeat(500).as_bytes()), format!("{}…", "é".repeat(SHOWN_CHARS)));
         assert_eq!(first_line(b""), "");
     }
