@@ -257,6 +257,7 @@ async fn every_misbehaviour_ends_the_attempt_with_one_line_for_people() {
         (Mode::SlowHeaders, "no answer within 10 s"),
         (Mode::CloseEarly, "connection closed before message completed"),
         (Mode::CloseInHeaders, "connection closed before message completed"),
+        (Mode::EndlessHeaders, "message head is too large"),
         (Mode::status(500), "500 Internal Server Error"),
         (Mode::with_body(503, "\r\n<b>down</b>\r\nfor repair"), "503 Service Unavailable: <b>down</b>"),
         (Mode::CloseInBody { status: 502 }, "502 Bad Gateway"),

@@ -5,9 +5,10 @@ use std::collections::{BTreeMap, HashSet, VecDeque};
 use std::time::Duration;
 
 use super::Waiting;
+use super::backoff::next_attempt;
 use super::route::{Answer, Verdict};
 use crate::alarm::{Delivery, Notice, Outcome, Priority};
-use crate::quantity::{Mono, Utc};
+use crate::quantity::{Moment, Mono, Utc};
 
 /// A receiver that failed is tried no more often than this, however urgent what comes in.
 const URGENT_GAP: Duration = Duration::from_secs(5);
@@ -149,17 +150,17 @@ impl Queue {
         self.lanes[lane].take(now)
     }
 
-    /// Takes in what came of the attempt that [`take`](Self::take) started. `wait` gives the time to leave the receiver
-    /// alone, from its failures in a row.
+    /// Takes in what came of the attempt that [`take`](Self::take) started; gives the outcome and the receiver's
+    /// failures in a row. `jitter` is a random number in [0, 1), for the back-off.
     pub(super) fn answered(
         &mut self,
         lane: usize,
         answer: &Answer,
         body: Vec<u8>,
-        (now, utc): (Mono, Utc),
-        wait: impl FnOnce(u32) -> Duration,
-    ) -> Option<Outcome> {
-        self.lanes[lane].answered(answer, body, (now, utc), wait)
+        now: Moment,
+        jitter: f64,
+    ) -> Option<(Outcome, u32)> {
+        self.lanes[lane].answered(answer, body, now, jitter)
     }
 
     /// How every receiver stands.
@@ -205,22 +206,26 @@ impl Lane {
         &mut self,
         answer: &Answer,
         body: Vec<u8>,
-        (now, utc): (Mono, Utc),
-        wait: impl FnOnce(u32) -> Duration,
-    ) -> Option<Outcome> {
+        now: Moment,
+        jitter: f64,
+    ) -> Option<(Outcome, u32)> {
         let place = self.sending.take()?;
         let entry = self.waiting.get_mut(&place)?;
         self.last_said = Some(answer.said.clone());
         entry.waiting.attempts += 1;
         entry.waiting.body = Some(body.clone());
+        let mut retry_after = None;
         let delivery = match answer.verdict {
-            Verdict::Taken => Delivery::Delivered { at: utc },
-            Verdict::Later { .. } => Delivery::Waiting,
+            Verdict::Taken => Delivery::Delivered { at: now.utc },
+            Verdict::Later { retry_after: asked } => {
+                retry_after = asked;
+                Delivery::Waiting
+            }
             Verdict::Refused { allowed } => {
                 entry.refusals += 1;
-                if entry.refusals < allowed { Delivery::Waiting } else { Delivery::GivenUp { at: utc } }
+                if entry.refusals < allowed { Delivery::Waiting } else { Delivery::GivenUp { at: now.utc } }
             }
-            Verdict::Gone => Delivery::GivenUp { at: utc },
+            Verdict::Gone => Delivery::GivenUp { at: now.utc },
         };
         let outcome = Outcome {
             notice_id: entry.waiting.notice.id,
@@ -234,12 +239,13 @@ impl Lane {
             self.rest = None;
         } else {
             self.failures = self.failures.saturating_add(1);
-            self.rest = Some(Rest { until: now + wait(self.failures), failed_at: now, tried: place.0 });
+            let until = now.mono + next_attempt(self.failures, retry_after, jitter);
+            self.rest = Some(Rest { until, failed_at: now.mono, tried: place.0 });
         }
         if outcome.delivery != Delivery::Waiting {
             self.finish(place);
         }
-        Some(outcome)
+        Some((outcome, self.failures))
     }
 
     fn finish(&mut self, place: Place) {
@@ -297,11 +303,18 @@ mod tests {
         Answer { verdict, said: "said".into() }
     }
 
-    const LATER: Verdict = Verdict::Later { retry_after: None };
-    const AT: (Mono, Utc) = (Mono(0), Utc(0));
+    /// A wait that, without jitter, is kept to the second.
+    const IN_A_MINUTE: Verdict = Verdict::Later { retry_after: Some(Duration::from_secs(60)) };
+    const NO_JITTER: f64 = 0.0;
+    const START: Moment = after(0);
 
-    fn minute(_failures: u32) -> Duration {
-        Duration::from_secs(60)
+    const fn after(ms: u64) -> Moment {
+        Moment { mono: Mono(ms), utc: Utc(0) }
+    }
+
+    fn answered(queue: &mut Queue, lane: usize, verdict: Verdict, now: Moment) -> Outcome {
+        let (outcome, _) = queue.answered(lane, &answer(verdict), b"bytes".into(), now, NO_JITTER).unwrap();
+        outcome
     }
 
     /// The numbers in the order in which they are delivered, if every attempt succeeds.
@@ -309,7 +322,7 @@ mod tests {
         let mut order = Vec::new();
         while let Ok((notice, _)) = queue.take(lane, Mono(0)) {
             order.push(notice.id);
-            queue.answered(lane, &answer(Verdict::Taken), vec![], AT, minute);
+            answered(queue, lane, Verdict::Taken, START);
         }
         order
     }
@@ -380,7 +393,7 @@ mod tests {
     fn a_failed_receiver_rests_as_a_whole_but_not_for_what_is_more_urgent() {
         let mut queue = queue(10, [(1, Priority::Medium)]);
         queue.take(0, Mono(0)).unwrap();
-        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        answered(&mut queue, 0, IN_A_MINUTE, START);
         queue.add(waiting(2, "phone", Priority::Medium), Utc(0));
         assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(60_000))));
         assert_eq!(queue.take(1, Mono(0)), Err(Hold::Nothing), "the other receiver is not held");
@@ -388,7 +401,7 @@ mod tests {
         queue.add(waiting(3, "phone", Priority::High), Utc(0));
         assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(5_000))), "but not within a few seconds");
         assert_eq!(queue.take(0, Mono(5_000)).unwrap().0.id, 3);
-        queue.answered(0, &answer(LATER), vec![], (Mono(5_000), Utc(0)), minute);
+        answered(&mut queue, 0, IN_A_MINUTE, after(5_000));
         queue.add(waiting(4, "phone", Priority::High), Utc(0));
         assert_eq!(queue.take(0, Mono(5_000)), Err(Hold::Until(Mono(65_000))), "an equally urgent one waits");
     }
@@ -396,17 +409,13 @@ mod tests {
     #[test]
     fn a_success_ends_the_rest_and_the_row_of_failures() {
         let mut queue = queue(10, [(1, Priority::Low), (2, Priority::Low)]);
-        let mut rows = Vec::new();
-        for now in [0, 60_000] {
+        for (now, row) in [(0, 1), (60_000, 2)] {
             queue.take(0, Mono(now)).unwrap();
-            queue.answered(0, &answer(LATER), vec![], (Mono(now), Utc(0)), |row| {
-                rows.push(row);
-                minute(row)
-            });
+            answered(&mut queue, 0, IN_A_MINUTE, after(now));
+            assert_eq!(queue.status()[0].failures, row);
         }
-        assert_eq!(rows, [1, 2]);
         queue.take(0, Mono(120_000)).unwrap();
-        queue.answered(0, &answer(Verdict::Taken), vec![], (Mono(120_000), Utc(0)), minute);
+        answered(&mut queue, 0, Verdict::Taken, after(120_000));
         assert_eq!(queue.status()[0].failures, 0);
         assert_eq!(queue.take(0, Mono(120_000)).unwrap().0.id, 2);
     }
@@ -414,17 +423,18 @@ mod tests {
     #[test]
     fn a_refused_notice_is_given_up_after_as_many_refusals_as_it_is_worth() {
         let mut queue = queue(10, [(1, Priority::Low)]);
+        let refused = Verdict::Refused { allowed: 2 };
+        let mut now = START;
         // What isn't a refusal doesn't count.
-        for verdict in [LATER, LATER, Verdict::Refused { allowed: 2 }] {
-            queue.take(0, Mono(0)).unwrap();
-            let outcome = queue.answered(0, &answer(verdict), vec![], AT, |_| Duration::ZERO).unwrap();
-            assert_eq!(outcome.delivery, Delivery::Waiting);
+        for verdict in [IN_A_MINUTE, IN_A_MINUTE, refused] {
+            queue.take(0, now.mono).unwrap();
+            assert_eq!(answered(&mut queue, 0, verdict, now).delivery, Delivery::Waiting);
+            now.mono = queue.status()[0].next_attempt.unwrap();
         }
-        queue.take(0, Mono(0)).unwrap();
-        let outcome =
-            queue.answered(0, &answer(Verdict::Refused { allowed: 2 }), b"b".into(), AT, minute).unwrap();
+        queue.take(0, now.mono).unwrap();
+        let outcome = answered(&mut queue, 0, refused, now);
         assert_eq!((outcome.attempts, outcome.delivery), (4, Delivery::GivenUp { at: Utc(0) }));
-        assert_eq!(outcome.body, b"b");
+        assert_eq!(outcome.body, b"bytes");
         assert_eq!(queue.status()[0].queued, 0);
     }
 
@@ -442,7 +452,7 @@ mod tests {
         let mut queue = queue(10, [(8, Priority::High), (3, Priority::Low)]);
         queue.take(0, Mono(0)).unwrap();
         assert!(queue.status()[0].sending);
-        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        answered(&mut queue, 0, IN_A_MINUTE, START);
         let phone = ReceiverStatus {
             receiver: "phone".into(),
             queued: 2,

@@ -33,6 +33,8 @@ pub(crate) enum Mode {
     CloseInBody { status: u16 },
     /// Sends the answer's headers byte by byte and never comes to their end.
     SlowHeaders,
+    /// Sends headers without end, as fast as they are read.
+    EndlessHeaders,
     /// Sends an answer whose body never ends, as fast as it is read.
     EndlessBody { status: u16 },
 }
@@ -231,6 +233,12 @@ async fn answer(mut stream: TcpStream, mut modes: watch::Receiver<Mode>, log: Lo
             while !modes.has_changed().unwrap_or(true) {
                 stream.write_all(b"x").await?;
                 tokio::time::sleep(Duration::from_millis(5)).await;
+            }
+        }
+        Mode::EndlessHeaders => {
+            stream.write_all(b"HTTP/1.1 200 OK\r\nX-Endless: ").await?;
+            loop {
+                stream.write_all(&[b'x'; 4096]).await?;
             }
         }
         Mode::EndlessBody { status } => {
