@@ -8,7 +8,8 @@ use tokio::sync::{Notify, mpsc, watch};
 use tokio::task::JoinSet;
 
 use super::NoticeError;
-use super::queue::{Hold, Queue, ReceiverStatus};
+use super::lane::{Hold, ReceiverStatus};
+use super::queue::Queue;
 use super::route::{Answer, Sender, Verdict};
 use crate::alarm::{Delivery, Notice, Outcome};
 use crate::clock::Clock;
