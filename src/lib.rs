@@ -20,16 +20,25 @@
 //! | [`supply`] | from mains to every rail | yes |
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
 //! | [`config`] | the TOML file into checked types | yes |
-//! | [`report`] | how each result is said and drawn | yes |
+//! | [`watch`] | one site's live state: readings in, decided alarms and notices out | yes |
+//! | [`report`] | one way to say each result, as text and as JSON | yes |
 //! | [`clock`] | the only place that reads a clock | no |
+//! | [`store`] | the record: SQLite, blocks of readings, intervals, alarms, outbox, requests | no |
+//! | [`logger`] | ports, the line format, the simulated logger | no |
 //! | [`notice`] | delivers notices to receivers | no |
+//! | [`daemon`] | starts the tasks and the walk, joins them, stops them | no |
+//! | [`cli`] | one file a command | no |
 
 pub mod alarm;
+pub mod cli;
 pub mod clock;
 pub mod config;
+pub mod daemon;
 pub mod logger;
 pub mod notice;
 pub mod quantity;
 pub mod reading;
 pub mod report;
+pub mod store;
 pub mod supply;
+pub mod watch;

@@ -81,6 +81,15 @@ impl Quality {
     }
 }
 
+/// A reading's time and whether it can be believed.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct Stamp {
+    /// When, UTC.
+    pub at: Utc,
+    /// True while the host's clock had stepped back or was not yet known.
+    pub doubtful: bool,
+}
+
 /// One value of one channel at one time, as the record keeps it.
 #[derive(Clone, Copy, Debug, PartialEq, Eq, Serialize, Deserialize)]
 pub struct Reading {

@@ -3,9 +3,15 @@
 //! Pure: it is told the time and the figures, and says what changed. Adding a condition touches `conditions.rs`
 //! alone.
 
+mod conditions;
+mod delay;
+mod figures;
 mod record;
 mod state;
 
+pub use conditions::{CONDITIONS, Condition, Judged, condition};
+pub use delay::{Delay, Level, Side};
+pub use figures::{Figures, LoggerFigures, PartFigures, RailFigures};
 pub use record::{
     AlarmKey, AlarmRecord, Delivery, Facts, JournalEntry, Notice, NoticeKind, Outcome, Priority, Request,
     RequestAction,

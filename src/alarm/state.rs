@@ -128,3 +128,81 @@ impl State {
         })
     }
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    /// Every state against every event, written from the state diagram of IEC 62682 / ANSI/ISA-18.2-2016 (names of
+    /// states confirmed in OPC 10000-9; the diagram itself from memory), one letter a state:
+    /// N normal, U unacknowledged, A acknowledged, R returned unacknowledged, S/s shelved, P/p suppressed by design,
+    /// O/o out of service, the capital while the condition holds. `.` means that the event has no meaning there.
+    const TABLE: &str = "
+        state  raise clear ack realarm shelve unshelve suppress unsuppress takeout putback
+        N      U     .     .   .       s      .        p        .          o       .
+        U      .     R     A   .       S      .        P        .          O       .
+        A      .     N     .   U       S      .        P        .          O       .
+        R      U     .     N   .       s      .        p        .          o       .
+        s      S     .     .   .       .      N        .        .          o       .
+        S      .     s     .   .       .      U        .        .          O       .
+        p      P     .     .   .       s      .        .        N          o       .
+        P      .     p     .   .       S      .        .        U          O       .
+        o      O     .     .   .       .      .        .        .          .       N
+        O      .     o     .   .       .      .        .        .          .       U";
+
+    fn state(letter: &str) -> State {
+        match letter {
+            "N" => State::Normal,
+            "U" => State::Unacknowledged,
+            "A" => State::Acknowledged,
+            "R" => State::ReturnedUnacknowledged,
+            "s" | "S" => State::Shelved { active: letter == "S" },
+            "p" | "P" => State::Suppressed { active: letter == "P" },
+            "o" | "O" => State::OutOfService { active: letter == "O" },
+            other => panic!("no state {other}"),
+        }
+    }
+
+    fn event(word: &str) -> Event {
+        match word {
+            "raise" => Event::Raise,
+            "clear" => Event::Clear,
+            "ack" => Event::Acknowledge,
+            "realarm" => Event::ReAlarm,
+            "shelve" => Event::Shelve,
+            "unshelve" => Event::Unshelve,
+            "suppress" => Event::Suppress,
+            "unsuppress" => Event::Unsuppress,
+            "takeout" => Event::TakeOut,
+            "putback" => Event::PutBack,
+            other => panic!("no event {other}"),
+        }
+    }
+
+    #[test]
+    fn every_state_and_event_goes_where_the_standard_says() {
+        let mut rows = TABLE.lines().filter(|row| !row.trim().is_empty()).map(|row| row.split_whitespace());
+        let events: Vec<_> = rows.next().unwrap().skip(1).collect();
+        let mut pairs = 0;
+        for mut row in rows {
+            let from = row.next().unwrap();
+            for (word, to) in events.iter().zip(row) {
+                let expected = (to != ".").then(|| state(to));
+                assert_eq!(state(from).after(event(word)), expected, "{from} on {word}");
+                pairs += 1;
+            }
+        }
+        assert_eq!(pairs, 10 * 10, "every pair is in the table");
+    }
+
+    #[test]
+    fn no_event_but_an_acknowledgement_or_setting_aside_takes_an_unseen_alarm_out_of_sight() {
+        for (word, seen) in
+            [("ack", true), ("shelve", true), ("suppress", true), ("takeout", true), ("clear", false)]
+        {
+            let after = State::Unacknowledged.after(event(word)).unwrap();
+            let still_unseen = matches!(after, State::Unacknowledged | State::ReturnedUnacknowledged);
+            assert_eq!(still_unseen, !seen, "{word}");
+        }
+    }
+}

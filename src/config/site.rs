@@ -3,14 +3,17 @@
 use std::path::PathBuf;
 use std::time::Duration;
 
+use chrono::NaiveDate;
 use chrono_tz::Tz;
 
+use super::complaint::Complaint;
+use super::secret::SecretSource;
 use crate::alarm::Priority;
 use crate::reading::ChannelQuantity;
 use crate::supply::{Circuit, Loading, MainsWave, Measured};
 
 /// One site: a house, its loggers, its amplifiers.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct Site {
     /// The file that it came from.
     pub file: PathBuf,
@@ -37,6 +40,8 @@ pub struct Site {
     /// How much of the projected rail's U (k = 2) is taken off a limit to get the setpoint (JCGM 106 guard band,
     /// rejection side: a larger one warns earlier).
     pub guard_band: f64,
+    /// Values that are possible but unlikely, each with the reason.
+    pub warnings: Vec<Complaint>,
 }
 
 impl Site {
@@ -52,16 +57,16 @@ impl Site {
 }
 
 /// Where and how the record is kept.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct StoreSettings {
-    /// The database file.
+    /// The database file; a relative path in the config is meant from the config's folder.
     pub path: PathBuf,
     /// How long readings may wait in memory before they are committed.
     pub commit_every: Duration,
 }
 
 /// One logger.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct LoggerSettings {
     /// Its name; `logger` when there is only one and none was given.
     pub name: String,
@@ -113,16 +118,122 @@ pub struct RailOf {
 }
 
 /// One amplifier.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct Amplifier {
     /// Its name.
     pub name: String,
+    /// When it may be on, by the clock, where no rail channel can tell; empty when nobody said.
+    pub in_use: Vec<DayWindow>,
     /// The short way of stating its supply.
     pub measured: Option<MeasuredSupply>,
     /// The full way.
     pub circuit: Option<Circuit>,
+    /// Its output valves. Their current is among the circuit's loads already.
+    pub output: Option<OutputStage>,
+    /// How its capacitors fare while the valves are cold; with a circuit only.
+    pub cold: Option<ColdStart>,
     /// The limits that its rails must keep.
     pub limits: Vec<Limit>,
+    /// The service log of the config, by day.
+    pub events: Vec<ServiceEvent>,
+}
+
+/// A stretch of the local day, in minutes from midnight; one that ends before it starts runs over midnight.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub struct DayWindow {
+    /// First minute, 0 to 1439.
+    pub from_min: u16,
+    /// The minute after the last, 1 to 1440.
+    pub to_min: u16,
+}
+
+impl DayWindow {
+    /// Whether it holds the minute that starts `minute` minutes after midnight.
+    pub fn contains(self, minute: u16) -> bool {
+        if self.from_min < self.to_min {
+            (self.from_min..self.to_min).contains(&minute)
+        } else {
+            minute >= self.from_min || minute < self.to_min
+        }
+    }
+}
+
+/// The output valves at rest.
+#[derive(Clone, Debug, PartialEq)]
+pub struct OutputStage {
+    /// Type designation, as the owner wrote it; [`super::output_valve`] may know its ratings.
+    pub type_name: Option<String>,
+    /// How many.
+    pub count: u32,
+    /// Idle current of one, A.
+    pub idle_a_each: f64,
+    /// The rail at which that current was read, V.
+    pub at_v: f64,
+    /// Cathode above 0 V, V.
+    pub cathode_v: f64,
+    /// The node that feeds their anodes.
+    pub node: String,
+    /// How they are biased.
+    pub bias: Option<Bias>,
+    /// Where the bias comes from.
+    pub bias_from: BiasFrom,
+    /// Exponent of current over rail voltage: given, or from the bias.
+    pub law: f64,
+}
+
+/// How output valves are biased.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Bias {
+    /// By a resistor in the cathode.
+    Cathode,
+    /// From a winding of the same transformer, unregulated: it moves with the mains.
+    Winding,
+    /// From a regulated source: it stands still while the rail moves.
+    Regulated,
+}
+
+/// What a bias supply is fed from; it decides whether a dropper in the rectifier's return moves the bias.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum BiasFrom {
+    /// A winding of its own.
+    OwnWinding,
+    /// A tap of the rail's winding.
+    HtTap,
+    /// A capacitor from the rail's winding.
+    HtCapacitor,
+    /// There is none.
+    None,
+    /// Nobody said.
+    Unknown,
+}
+
+/// What stands between switching on and the valves' drawing current.
+#[derive(Clone, Debug, PartialEq)]
+pub struct ColdStart {
+    /// Whether the amplifier can be kept waiting with cold anodes.
+    pub standby: Standby,
+    /// How long the rail stands unloaded after switching on, s.
+    pub warm_up_s: f64,
+}
+
+/// Where a standby switch interrupts.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub enum Standby {
+    /// There is none.
+    None,
+    /// The rail's winding: all capacitors are without voltage.
+    HtAc,
+    /// After a node, by its name: that node and those before it stand at the full peak.
+    After(String),
+}
+
+/// One line of the service log.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct ServiceEvent {
+    /// The local day.
+    pub on: NaiveDate,
+    /// What was done.
+    pub what: String,
 }
 
 /// One measured pair and what it was measured at.
@@ -137,7 +248,7 @@ pub struct MeasuredSupply {
 }
 
 /// What a limit's figure already allows for.
-#[derive(Clone, Copy, Debug, PartialEq, Eq, serde::Serialize)]
+#[derive(Clone, Copy, Debug, PartialEq, Eq, serde::Serialize, serde::Deserialize)]
 #[serde(rename_all = "kebab-case")]
 pub enum Rating {
     /// Never to be exceeded, at any moment; also where the system is unknown.
@@ -183,7 +294,7 @@ pub struct AlarmOverride {
 }
 
 /// Where notices go.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub struct Receiver {
     /// Its name.
     pub name: String,
@@ -194,22 +305,13 @@ pub struct Receiver {
 }
 
 /// How a receiver is reached.
-#[derive(Clone, Debug)]
+#[derive(Clone, Debug, PartialEq)]
 pub enum Route {
     /// An HTTP POST of our JSON.
     Webhook {
         /// `http://` or `https://`.
         url: String,
-        /// Sent as `Authorization: Bearer …`.
+        /// Where the token of `Authorization: Bearer …` is to be had.
         token: Option<SecretSource>,
     },
-}
-
-/// Where a secret is read from when the daemon starts; the config file itself never holds one.
-#[derive(Clone, Debug, PartialEq, Eq)]
-pub enum SecretSource {
-    /// A file that holds the secret and nothing else.
-    File(PathBuf),
-    /// The name of an environment variable.
-    Env(String),
 }

@@ -3,6 +3,16 @@
 //! A thread of its own reads each port and hands bytes with their arrival time to a decoder; what comes out, one
 //! [`FromLogger`] after the other over a bounded channel, is all that the rest of the house sees.
 
+mod decode;
+mod port;
+mod tide;
+
+pub use decode::Decoder;
+pub use port::{PortHandle, StillHanging, back_off, spawn};
+pub use tide::{
+    MAX_CHANNEL_NAME, MAX_LINE, Pairs, TideLine, Unreadable, Unwritable, Value, crc16, write_line,
+};
+
 use crate::quantity::Moment;
 
 /// What a logger has to say, in the order in which it happened.
@@ -67,6 +77,29 @@ pub enum LineFault {
     Malformed,
     /// A channel that the config doesn't name; the line's other channels are kept.
     UnknownChannel,
-    /// Not a number, infinite, or beyond what can be stored; the line's other channels are kept.
+    /// Empty, not a number, infinite, or beyond what can be stored; the line's other channels are kept.
     BadValue,
+    /// A line that had been read already: the same sequence number and milliseconds as the one before.
+    Duplicate,
+}
+
+impl LineFault {
+    /// What it means, for the log.
+    pub fn sentence(self) -> &'static str {
+        match self {
+            LineFault::Garbage => "bytes that are no line were skipped; is the baud rate right?",
+            LineFault::TooLong => "a line longer than any may be was skipped",
+            LineFault::Checksum => {
+                "a line with a wrong check sum was skipped; look at cable and earthing if it goes on"
+            }
+            LineFault::Malformed => {
+                "a line with a right check sum that is no tide line was skipped; look at the firmware"
+            }
+            LineFault::UnknownChannel => {
+                "it sends a channel that the config doesn't name; its value was skipped"
+            }
+            LineFault::BadValue => "a value that is no possible figure was skipped",
+            LineFault::Duplicate => "a line came twice; the second was skipped",
+        }
+    }
 }

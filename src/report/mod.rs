@@ -1,8 +1,18 @@
-//! How results are said and drawn: one place for each result, used alike by the command line, the page and the
-//! notices, so that they never tell different stories. Pure: it is given figures and a time zone and returns text.
+//! One way to say each result: as text for people, as JSON for programs. The page, notices and the command line use
+//! the same.
+//!
+//! Pure: everything is written into a given writer; no clock, no file, no socket.
 
+mod alarms;
 mod notice;
+mod standing;
+mod time;
+mod understood;
 mod when;
 
+pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
+pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
+pub use time::{LocalTime, ago, span};
+pub use understood::understood_text;
 pub use when::{local_time, rfc3339};

@@ -4,6 +4,10 @@
 //! one, so that a test or a replay can drive a whole day through the program in a moment: [`SimulatedClock`] stands
 //! still until it is told to move.
 
+mod time_base;
+
+pub use time_base::{ClockStep, TimeBase};
+
 use std::collections::BTreeMap;
 use std::sync::{Arc, Mutex, MutexGuard};
 use std::time::{Duration, Instant, SystemTime, UNIX_EPOCH};

@@ -1,0 +1,60 @@
+//! Finding and reading the config file, and opening the record that it names.
+
+use std::path::{Path, PathBuf};
+
+use anyhow::{Context, bail};
+use etcetera::BaseStrategy;
+
+use crate::alarm::CONDITIONS;
+use crate::config::{Site, Surroundings};
+use crate::store::Store;
+use crate::watch::{RailWatch, projector, rail_watches};
+
+/// Reads the config: the given file, or the first that exists of those that `--help` names.
+pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
+    let file = match given {
+        Some(file) => file,
+        None => find()?,
+    };
+    let bytes =
+        std::fs::read(&file).with_context(|| format!("the config file {} can't be read", file.display()))?;
+    let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
+    let surroundings = Surroundings { conditions: &conditions, default_store: default_store() };
+    Site::parse_bytes(&bytes, &file, &surroundings)
+        .map_err(|complaints| anyhow::anyhow!("the config has mistakes, and nothing was done:\n{complaints}"))
+}
+
+/// Where the record is when `[store]` names no path: the user's data folder.
+fn default_store() -> PathBuf {
+    etcetera::choose_base_strategy()
+        .map_or_else(|_| PathBuf::from("railtide.db"), |user| user.data_dir().join("railtide/railtide.db"))
+}
+
+/// The record of a site, to read from; a sentence that helps where there's none yet.
+pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
+    Ok(Store::open_read_only(&site.store.path)?)
+}
+
+/// Every limit of the site with its projection.
+pub(super) fn rails(site: &Site) -> Vec<RailWatch> {
+    let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
+    rail_watches(site, &projectors)
+}
+
+fn find() -> anyhow::Result<PathBuf> {
+    let mut places = vec![PathBuf::from("railtide.toml")];
+    if let Ok(user) = etcetera::choose_base_strategy() {
+        places.push(user.config_dir().join("railtide/railtide.toml"));
+    }
+    places.push(Path::new("/etc/railtide/railtide.toml").to_owned());
+    match places.iter().find(|place| place.exists()) {
+        Some(place) => Ok(place.clone()),
+        None => {
+            let looked: Vec<_> = places.iter().map(|p| p.display().to_string()).collect();
+            bail!(
+                "no config file: looked for {}; name one with --config, or copy config/railtide.example.toml",
+                looked.join(", ")
+            )
+        }
+    }
+}

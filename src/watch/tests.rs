@@ -1,0 +1,245 @@
+//! An evening at a made-up hall, driven through [`Watch`] at a desk.
+
+use super::*;
+use crate::alarm::{NoticeKind, Priority};
+use crate::config::Surroundings;
+use crate::quantity::Utc;
+
+const HALL: &str = r#"
+[site]
+name = "hall"
+time_zone = "Europe/Lisbon"
+[[logger]]
+name = "bench"
+port = "/dev/null"
+[[channel]]
+name = "mains"
+quantity = "mains_rms"
+[[channel]]
+name = "hall.reservoir"
+quantity = "rail"
+amplifier = "hall"
+node = "reservoir"
+[[amplifier]]
+name = "hall"
+[amplifier.measured]
+mains_v = 220
+rail_v = 452
+node = "reservoir"
+loading = "idle"
+meter_pct = 0.5
+[[amplifier.limit]]
+node = "reservoir"
+max_v = 480
+why = "anode supply limit"
+[[receiver]]
+name = "phone"
+webhook = "http://127.0.0.1:1/"
+"#;
+
+/// A site with one logger (mains, and the hall amplifier's reservoir), one limit and one receiver.
+pub(super) fn hall_site() -> Site {
+    let conditions: Vec<&str> = crate::alarm::CONDITIONS.iter().map(|c| c.name).collect();
+    let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
+    Site::parse(HALL, "railtide.toml".as_ref(), &surroundings).unwrap()
+}
+
+pub(super) fn projectors(site: &Site) -> Vec<Option<Projector>> {
+    site.amplifiers.iter().map(projector).collect()
+}
+
+struct Evening {
+    watch: Watch,
+    second: u64,
+}
+
+impl Evening {
+    fn begin() -> Self {
+        Self::of(
+            &hall_site(),
+            Restored { next_seq: 1, next_notice_id: 1, database_id: "db".into(), ..Restored::default() },
+        )
+    }
+
+    fn of(site: &Site, restored: Restored) -> Self {
+        let watch = Watch::new(site, &[ChannelId(1), ChannelId(2)], &projectors(site), restored, moment(0));
+        Evening { watch, second: 0 }
+    }
+
+    /// One line a second for `seconds`; everything that was decided meanwhile.
+    fn line(&mut self, seconds: u64, values: &[(usize, f64)]) -> Decided {
+        let mut all = Decided::default();
+        for _ in 0..seconds {
+            let now = moment(self.second);
+            gather(&mut all, self.watch.sample(0, Stamp { at: now.utc, doubtful: false }, values, now));
+            self.second += 1;
+        }
+        all
+    }
+
+    /// Silence for `seconds`.
+    fn silence(&mut self, seconds: u64) -> Decided {
+        let mut all = Decided::default();
+        for _ in 0..seconds {
+            gather(&mut all, self.watch.tick(moment(self.second)));
+            self.second += 1;
+        }
+        all
+    }
+
+    fn state(&self, condition: &str) -> State {
+        self.watch.alarms().find(|a| a.key.condition == condition).unwrap().state
+    }
+}
+
+fn gather(all: &mut Decided, more: Decided) {
+    all.readings.extend(more.readings);
+    all.alarms.extend(more.alarms);
+    all.journal.extend(more.journal);
+    all.notices.extend(more.notices);
+}
+
+fn moment(second: u64) -> Moment {
+    Moment { mono: Mono(second * 1000), utc: Utc(1_790_000_000_000 + second as i64 * 1000) }
+}
+
+fn rail_high() -> AlarmKey {
+    AlarmKey { condition: "rail-high".into(), subject: "hall.reservoir".into() }
+}
+
+#[test]
+fn an_evening_peak_raises_one_alarm_tells_once_and_returns_to_normal_after_the_deadband() {
+    let mut evening = Evening::begin();
+    assert_eq!(evening.line(60, &[(0, 226.0)]).journal, []);
+
+    let peak = evening.line(60, &[(0, 236.0)]);
+    assert_eq!(peak.readings.len(), 60);
+    assert_eq!(peak.journal.len(), 1);
+    assert_eq!(peak.notices.len(), 1);
+    let notice = &peak.notices[0];
+    assert_eq!((notice.kind, notice.priority, notice.id), (NoticeKind::Raised, Priority::High, 1));
+    assert_eq!(notice.idempotency_key, "db-1");
+    assert_eq!(notice.facts.source, "projected");
+    assert_eq!(notice.facts.loading, "idle", "without a rail channel it is judged at idle and says so");
+    assert!((notice.facts.value.unwrap() - 236.0 * 452.0 / 220.0).abs() < 1e-9);
+    assert_eq!(notice.at, moment(70).utc, "the on-delay of 10 s ran from the first high reading at 60 s");
+
+    let request = Request { by: "owner".into(), action: RequestAction::Acknowledge { key: rail_high() } };
+    let (decided, answer) = evening.watch.request(&request, moment(evening.second));
+    assert!(answer.done, "{}", answer.text);
+    assert_eq!(decided.journal[0].by.as_deref(), Some("owner"));
+    assert_eq!(evening.state("rail-high"), State::Acknowledged);
+
+    let back = evening.line(60, &[(0, 226.0)]);
+    assert_eq!(evening.state("rail-high"), State::Normal);
+    assert_eq!(back.notices.iter().map(|n| n.kind).collect::<Vec<_>>(), [NoticeKind::Returned]);
+    assert_eq!(back.journal[0].seq, 3, "the journal's numbers have no gap");
+}
+
+#[test]
+fn while_mains_is_unknown_rail_high_holds_its_state_and_the_silence_is_told() {
+    let mut evening = Evening::begin();
+    evening.line(60, &[(0, 236.0)]);
+    assert_eq!(evening.state("rail-high"), State::Unacknowledged);
+    let silent = evening.silence(600);
+    assert_eq!(evening.state("rail-high"), State::Unacknowledged);
+    assert!(evening.watch.figures(Mono(evening.second * 1000)).rails[0].projected.is_none());
+    assert_eq!(silent.notices.len(), 1);
+    assert_eq!(silent.notices[0].key.to_string(), "logger-silent:bench");
+    evening.line(1, &[(0, 236.0)]);
+    assert_eq!(evening.state("logger-silent"), State::ReturnedUnacknowledged);
+}
+
+#[test]
+fn a_rail_channel_that_shows_the_amplifier_off_suppresses_and_switching_on_raises_at_once() {
+    let mut evening = Evening::begin();
+    let off = evening.line(120, &[(0, 236.0), (1, 0.4)]);
+    assert_eq!(off.notices, []);
+    assert_eq!(evening.state("rail-high"), State::Suppressed { active: true });
+    let on = evening.line(1, &[(0, 236.0), (1, 470.0)]);
+    assert_eq!(on.notices.len(), 1);
+    assert_eq!(on.notices[0].facts.note, "the amplifier is on");
+}
+
+#[test]
+fn a_measured_rail_over_its_setpoint_raises_although_the_projection_does_not() {
+    let mut evening = Evening::begin();
+    let high = evening.line(30, &[(0, 226.0), (1, 481.0)]);
+    assert_eq!(high.notices.len(), 1);
+    assert_eq!(high.notices[0].facts.source, "measured");
+}
+
+#[test]
+fn state_and_numbers_survive_a_restart_without_a_second_notice() {
+    let mut before = Evening::begin();
+    before.line(60, &[(0, 236.0)]);
+    let restored = Restored {
+        alarms: before.watch.alarms().cloned().collect(),
+        next_seq: 2,
+        next_notice_id: 2,
+        database_id: "db".into(),
+    };
+    let mut after = Evening::of(&hall_site(), restored);
+    let decided = after.line(60, &[(0, 236.0)]);
+    assert_eq!((decided.journal, decided.notices), (vec![], vec![]));
+    assert_eq!(after.state("rail-high"), State::Unacknowledged);
+}
+
+#[test]
+fn an_alarm_whose_limit_left_the_config_is_cleared() {
+    let mut before = Evening::begin();
+    before.line(60, &[(0, 236.0)]);
+    let mut site = hall_site();
+    site.amplifiers[0].limits.clear();
+    let restored = Restored {
+        alarms: before.watch.alarms().cloned().collect(),
+        next_seq: 2,
+        next_notice_id: 2,
+        database_id: "db".into(),
+    };
+    let decided = Evening::of(&site, restored).line(1, &[(0, 236.0)]);
+    assert_eq!(decided.journal[0].to, State::ReturnedUnacknowledged);
+    assert_eq!(decided.journal[0].facts.note, "no longer in the config");
+}
+
+#[test]
+fn an_override_changes_a_delay_and_can_switch_a_condition_off() {
+    let mut site = hall_site();
+    let change = |condition: &str, enabled| crate::config::AlarmOverride {
+        condition: condition.into(),
+        on_delay: Some(Duration::ZERO),
+        off_delay: None,
+        deadband: None,
+        priority: Some(Priority::Low),
+        enabled,
+    };
+    site.alarms = vec![change("rail-high", true), change("logger-silent", false)];
+    let mut evening = Evening::of(&site, Restored { next_seq: 1, next_notice_id: 1, ..Restored::default() });
+    assert_eq!(evening.line(1, &[(0, 236.0)]).notices[0].priority, Priority::Low);
+    assert_eq!(evening.silence(600).journal, []);
+}
+
+#[test]
+fn a_receiver_that_wants_only_urgent_notices_is_spared_the_others() {
+    let mut site = hall_site();
+    site.receivers[0].min_priority = Priority::High;
+    let mut evening = Evening::of(&site, Restored { next_seq: 1, next_notice_id: 1, ..Restored::default() });
+    let silent = evening.silence(600);
+    assert_eq!((silent.journal.len(), silent.notices.len()), (1, 0));
+}
+
+#[test]
+fn acknowledging_what_is_not_there_is_refused_with_a_sentence() {
+    let mut evening = Evening::begin();
+    evening.line(1, &[(0, 226.0)]);
+    let ask = |key| Request { by: "owner".into(), action: RequestAction::Acknowledge { key } };
+    let unknown = AlarmKey { condition: "rail-high".into(), subject: "shed.reservoir".into() };
+    for (key, expected) in [
+        (unknown, "there is no alarm rail-high:shed.reservoir; `railtide alarm` lists those there are"),
+        (rail_high(), "the alarm rail-high:hall.reservoir is normal: that can't be done to it now"),
+    ] {
+        let (decided, answer) = evening.watch.request(&ask(key), moment(1));
+        assert_eq!((answer.done, answer.text.as_str()), (false, expected));
+        assert_eq!(decided, Decided::default());
+    }
+}
