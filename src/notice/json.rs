@@ -29,7 +29,7 @@ use chrono_tz::Tz;
 use serde::ser::{Serialize, SerializeMap, Serializer};
 
 use crate::alarm::Notice;
-use crate::report::{CAUTION, notice_text, rfc3339};
+use crate::report::{CAUTION, LocalTime, notice_text};
 
 const VERSION: u32 = 1;
 
@@ -57,8 +57,8 @@ impl Serialize for Body<'_> {
         map.serialize_entry("priority", &self.notice.priority)?;
         map.serialize_entry("condition", &key.condition)?;
         some_text(&mut map, "subject", &key.subject)?;
-        map.serialize_entry("at", &rfc3339(self.notice.at, self.zone))?;
-        map.serialize_entry("raised_at", &rfc3339(self.notice.raised_at, self.zone))?;
+        map.serialize_entry("at", &LocalTime::of(self.notice.at, self.zone))?;
+        map.serialize_entry("raised_at", &LocalTime::of(self.notice.raised_at, self.zone))?;
         let suffix = suffix(&facts.unit);
         for (figure, value) in [
             ("value", facts.value),
@@ -159,8 +159,8 @@ mod tests {
         "priority":"high",
         "condition":"rail-high",
         "subject":"hall.reservoir",
-        "at":"2026-10-06T18:42:10.000+02:00",
-        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "at":"2026-10-06T18:42:10+02:00",
+        "raised_at":"2026-10-06T18:42:10+02:00",
         "value_v":491.6,
         "value_u_v":4.2,
         "setpoint_v":475.8,
@@ -194,8 +194,8 @@ mod tests {
         "priority":"high",
         "condition":"logger-silent",
         "subject":"bench",
-        "at":"2026-10-06T18:43:15.000+02:00",
-        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "at":"2026-10-06T18:43:15+02:00",
+        "raised_at":"2026-10-06T18:42:10+02:00",
         "value_s":65.0,
         "setpoint_s":30.0,
         "advice":"Switch the amplifier off.",
@@ -221,8 +221,8 @@ mod tests {
         "kind":"trial",
         "priority":"high",
         "condition":"rail-high",
-        "at":"2026-10-06T18:42:10.000+02:00",
-        "raised_at":"2026-10-06T18:42:10.000+02:00",
+        "at":"2026-10-06T18:42:10+02:00",
+        "raised_at":"2026-10-06T18:42:10+02:00",
         "recorded":true,
         "title":"Trial notice from railtide",
         "text":"A trial of the receiver phone, asked for at 18:42:10 CEST on Tue 6 Oct 2026.\nNo alarm stands behind it: if you can read this, notices reach you.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
