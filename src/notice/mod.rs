@@ -10,13 +10,15 @@
 //! A kind of receiver is one file beside `webhook.rs` and one variant in `route.rs`.
 
 mod backoff;
+mod json;
+mod lane;
 mod queue;
 mod route;
 mod secret;
 mod webhook;
 mod worker;
 
-pub use queue::ReceiverStatus;
+pub use lane::ReceiverStatus;
 pub use secret::SecretError;
 pub use worker::{CAPACITY, Waiting, Worker, WorkerHandle};
 

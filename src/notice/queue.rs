@@ -1,21 +1,14 @@
 //! What waits in memory: one lane per receiver, bounded all together. It knows no clock and no socket; it is told
 //! the time and says what may be sent.
 
-use std::collections::{BTreeMap, HashSet, VecDeque};
-use std::time::Duration;
+use std::cmp::Reverse;
+use std::collections::VecDeque;
 
 use super::Waiting;
-use super::route::{Answer, Verdict};
-use crate::alarm::{Delivery, Notice, Outcome, Priority};
-use crate::quantity::{Mono, Utc};
-
-/// A receiver that failed is tried no more often than this, however urgent what comes in.
-const URGENT_GAP: Duration = Duration::from_secs(5);
-/// How many finished notices a lane remembers, so that one handed over again isn't sent again.
-const REMEMBERED: usize = 1_000;
-
-/// Order of delivery within a lane: priority, then number in the outbox, then arrival.
-type Place = (Priority, u64, u64);
+use super::lane::{Hold, Lane, ReceiverStatus};
+use super::route::Answer;
+use crate::alarm::{Delivery, Notice, Outcome};
+use crate::quantity::{Moment, Mono, Utc};
 
 /// All lanes.
 pub(super) struct Queue {
@@ -24,63 +17,6 @@ pub(super) struct Queue {
     arrivals: u64,
     /// Notices that were given up without an attempt and not yet reported, at most `capacity` of them.
     let_go: VecDeque<Outcome>,
-}
-
-/// What waits for one receiver, and how the receiver has been answering.
-pub(super) struct Lane {
-    pub(super) receiver: String,
-    waiting: BTreeMap<Place, Entry>,
-    /// Idempotency keys of what waits and of the last finished ones.
-    known: HashSet<String>,
-    finished: VecDeque<String>,
-    /// The one that an attempt is being made for; it stays in `waiting` until the answer is there.
-    sending: Option<Place>,
-    /// Failures in a row.
-    failures: u32,
-    last_said: Option<String>,
-    /// Set while the receiver is backed off.
-    rest: Option<Rest>,
-}
-
-struct Entry {
-    waiting: Waiting,
-    refusals: u32,
-}
-
-/// A receiver that failed is left alone for a while.
-struct Rest {
-    until: Mono,
-    failed_at: Mono,
-    /// Priority of the notice that it failed with: only what is more urgent needn't wait for `until`.
-    tried: Priority,
-}
-
-/// Why a lane can't send.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Hold {
-    /// Nothing waits.
-    Nothing,
-    /// The receiver is left alone until then.
-    Until(Mono),
-}
-
-/// How one receiver stands: for `notice list` and for the condition notice-stuck.
-#[derive(Clone, Debug, PartialEq, Eq)]
-pub struct ReceiverStatus {
-    /// Its name.
-    pub receiver: String,
-    /// Notices that wait, the one being sent included.
-    pub queued: usize,
-    /// When what the oldest of them tells of happened.
-    pub oldest_at: Option<Utc>,
-    /// What the receiver or the network last said.
-    pub last_said: Option<String>,
-    /// Failed attempts in a row.
-    pub failures: u32,
-    /// Whether an attempt is being made.
-    pub sending: bool,
-    /// While it is backed off: when it is tried again, on the worker's clock.
-    pub next_attempt: Option<Mono>,
 }
 
 impl Queue {
@@ -97,29 +33,21 @@ impl Queue {
             self.let_go(waiting, now, said);
             return;
         };
-        if !lane.known.insert(waiting.notice.idempotency_key.clone()) {
-            return;
-        }
         self.arrivals += 1;
-        let place = (waiting.notice.priority, waiting.notice.id, self.arrivals);
-        lane.waiting.insert(place, Entry { waiting, refusals: 0 });
-        if self.lanes.iter().map(|lane| lane.waiting.len()).sum::<usize>() > self.capacity {
+        lane.add(waiting, self.arrivals);
+        if self.lanes.iter().map(Lane::len).sum::<usize>() > self.capacity {
             self.drop_least_urgent_oldest(now);
         }
     }
 
     fn drop_least_urgent_oldest(&mut self, now: Utc) {
         let candidates =
-            self.lanes.iter_mut().filter_map(|lane| lane.least_urgent_oldest().map(|p| (p, lane)));
-        let Some((place, lane)) = candidates
-            .min_by_key(|((priority, id, arrival), _)| (std::cmp::Reverse(*priority), *id, *arrival))
-        else {
-            return;
-        };
-        if let Some(entry) = lane.waiting.remove(&place) {
-            lane.known.remove(&entry.waiting.notice.idempotency_key);
+            self.lanes.iter_mut().filter_map(|lane| lane.least_urgent_oldest().map(|place| (place, lane)));
+        let chosen =
+            candidates.min_by_key(|((priority, id, arrival), _)| (Reverse(*priority), *id, *arrival));
+        if let Some(waiting) = chosen.and_then(|(place, lane)| lane.drop_at(place)) {
             let said = format!("let go untold: more than {} notices were waiting", self.capacity);
-            self.let_go(entry.waiting, now, said);
+            self.let_go(waiting, now, said);
         }
     }
 
@@ -149,17 +77,17 @@ impl Queue {
         self.lanes[lane].take(now)
     }
 
-    /// Takes in what came of the attempt that [`take`](Self::take) started. `wait` gives the time to leave the receiver
-    /// alone, from its failures in a row.
+    /// Takes in what came of the attempt that [`take`](Self::take) started; gives the outcome and the receiver's
+    /// failures in a row. `jitter` is a random number in [0, 1), for the back-off.
     pub(super) fn answered(
         &mut self,
         lane: usize,
         answer: &Answer,
         body: Vec<u8>,
-        (now, utc): (Mono, Utc),
-        wait: impl FnOnce(u32) -> Duration,
-    ) -> Option<Outcome> {
-        self.lanes[lane].answered(answer, body, (now, utc), wait)
+        now: Moment,
+        jitter: f64,
+    ) -> Option<(Outcome, u32)> {
+        self.lanes[lane].answered(answer, body, now, jitter)
     }
 
     /// How every receiver stands.
@@ -168,107 +96,13 @@ impl Queue {
     }
 }
 
-impl Lane {
-    fn new(receiver: String) -> Self {
-        Lane {
-            receiver,
-            waiting: BTreeMap::new(),
-            known: HashSet::new(),
-            finished: VecDeque::new(),
-            sending: None,
-            failures: 0,
-            last_said: None,
-            rest: None,
-        }
-    }
-
-    fn least_urgent_oldest(&self) -> Option<Place> {
-        let not_sending = |place: &&Place| Some(**place) != self.sending;
-        let (lowest, ..) = *self.waiting.keys().rev().find(not_sending)?;
-        self.waiting.range((lowest, 0, 0)..).map(|(place, _)| place).find(not_sending).copied()
-    }
-
-    fn take(&mut self, now: Mono) -> Result<(Notice, Option<Vec<u8>>), Hold> {
-        let (place, entry) = self.waiting.first_key_value().ok_or(Hold::Nothing)?;
-        if let Some(rest) = &self.rest {
-            let urgent = place.0 < rest.tried;
-            let due = if urgent { rest.until.min(rest.failed_at + URGENT_GAP) } else { rest.until };
-            if now < due {
-                return Err(Hold::Until(due));
-            }
-        }
-        self.sending = Some(*place);
-        Ok((entry.waiting.notice.clone(), entry.waiting.body.clone()))
-    }
-
-    fn answered(
-        &mut self,
-        answer: &Answer,
-        body: Vec<u8>,
-        (now, utc): (Mono, Utc),
-        wait: impl FnOnce(u32) -> Duration,
-    ) -> Option<Outcome> {
-        let place = self.sending.take()?;
-        let entry = self.waiting.get_mut(&place)?;
-        self.last_said = Some(answer.said.clone());
-        entry.waiting.attempts += 1;
-        entry.waiting.body = Some(body.clone());
-        let delivery = match answer.verdict {
-            Verdict::Taken => Delivery::Delivered { at: utc },
-            Verdict::Later { .. } => Delivery::Waiting,
-            Verdict::Refused { allowed } => {
-                entry.refusals += 1;
-                if entry.refusals < allowed { Delivery::Waiting } else { Delivery::GivenUp { at: utc } }
-            }
-            Verdict::Gone => Delivery::GivenUp { at: utc },
-        };
-        let outcome = Outcome {
-            notice_id: entry.waiting.notice.id,
-            attempts: entry.waiting.attempts,
-            delivery,
-            said: answer.said.clone(),
-            body,
-        };
-        if answer.verdict == Verdict::Taken {
-            self.failures = 0;
-            self.rest = None;
-        } else {
-            self.failures = self.failures.saturating_add(1);
-            self.rest = Some(Rest { until: now + wait(self.failures), failed_at: now, tried: place.0 });
-        }
-        if outcome.delivery != Delivery::Waiting {
-            self.finish(place);
-        }
-        Some(outcome)
-    }
-
-    fn finish(&mut self, place: Place) {
-        let Some(entry) = self.waiting.remove(&place) else { return };
-        self.finished.push_back(entry.waiting.notice.idempotency_key);
-        if self.finished.len() > REMEMBERED
-            && let Some(oldest) = self.finished.pop_front()
-        {
-            self.known.remove(&oldest);
-        }
-    }
-
-    fn status(&self) -> ReceiverStatus {
-        ReceiverStatus {
-            receiver: self.receiver.clone(),
-            queued: self.waiting.len(),
-            oldest_at: self.waiting.values().map(|entry| entry.waiting.notice.at).min(),
-            last_said: self.last_said.clone(),
-            failures: self.failures,
-            sending: self.sending.is_some(),
-            next_attempt: self.rest.as_ref().filter(|_| !self.waiting.is_empty()).map(|rest| rest.until),
-        }
-    }
-}
-
 #[cfg(test)]
 mod tests {
+    use std::time::Duration;
+
     use super::*;
-    use crate::alarm::{AlarmKey, Facts, NoticeKind};
+    use crate::alarm::{AlarmKey, Facts, NoticeKind, Priority};
+    use crate::notice::route::Verdict;
 
     fn waiting(id: u64, receiver: &str, priority: Priority) -> Waiting {
         let notice = Notice {
@@ -297,11 +131,18 @@ mod tests {
         Answer { verdict, said: "said".into() }
     }
 
-    const LATER: Verdict = Verdict::Later { retry_after: None };
-    const AT: (Mono, Utc) = (Mono(0), Utc(0));
+    /// A wait that, without jitter, is kept to the second.
+    const IN_A_MINUTE: Verdict = Verdict::Later { retry_after: Some(Duration::from_secs(60)) };
+    const NO_JITTER: f64 = 0.0;
+    const START: Moment = after(0);
 
-    fn minute(_failures: u32) -> Duration {
-        Duration::from_secs(60)
+    const fn after(ms: u64) -> Moment {
+        Moment { mono: Mono(ms), utc: Utc(0) }
+    }
+
+    fn answered(queue: &mut Queue, lane: usize, verdict: Verdict, now: Moment) -> Outcome {
+        let (outcome, _) = queue.answered(lane, &answer(verdict), b"bytes".into(), now, NO_JITTER).unwrap();
+        outcome
     }
 
     /// The numbers in the order in which they are delivered, if every attempt succeeds.
@@ -309,7 +150,7 @@ mod tests {
         let mut order = Vec::new();
         while let Ok((notice, _)) = queue.take(lane, Mono(0)) {
             order.push(notice.id);
-            queue.answered(lane, &answer(Verdict::Taken), vec![], AT, minute);
+            answered(queue, lane, Verdict::Taken, START);
         }
         order
     }
@@ -368,19 +209,23 @@ mod tests {
 
     #[test]
     fn what_a_lane_remembers_of_the_finished_is_bounded() {
-        let mut queue = queue(10, []);
-        for id in 0..3 * REMEMBERED as u64 {
+        let mut queue = queue(10, (1..=2).map(|id| (id, Priority::Low)));
+        assert_eq!(drain(&mut queue, 0), [1, 2]);
+        for id in 3..=1_001 {
             queue.add(waiting(id, "phone", Priority::Low), Utc(0));
             assert_eq!(drain(&mut queue, 0), [id]);
         }
-        assert_eq!(queue.lanes[0].known.len(), REMEMBERED);
+        for id in [1, 2] {
+            queue.add(waiting(id, "phone", Priority::Low), Utc(0));
+        }
+        assert_eq!(drain(&mut queue, 0), [1], "of 1,001 finished ones only the first is forgotten");
     }
 
     #[test]
     fn a_failed_receiver_rests_as_a_whole_but_not_for_what_is_more_urgent() {
         let mut queue = queue(10, [(1, Priority::Medium)]);
         queue.take(0, Mono(0)).unwrap();
-        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        answered(&mut queue, 0, IN_A_MINUTE, START);
         queue.add(waiting(2, "phone", Priority::Medium), Utc(0));
         assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(60_000))));
         assert_eq!(queue.take(1, Mono(0)), Err(Hold::Nothing), "the other receiver is not held");
@@ -388,7 +233,7 @@ mod tests {
         queue.add(waiting(3, "phone", Priority::High), Utc(0));
         assert_eq!(queue.take(0, Mono(0)), Err(Hold::Until(Mono(5_000))), "but not within a few seconds");
         assert_eq!(queue.take(0, Mono(5_000)).unwrap().0.id, 3);
-        queue.answered(0, &answer(LATER), vec![], (Mono(5_000), Utc(0)), minute);
+        answered(&mut queue, 0, IN_A_MINUTE, after(5_000));
         queue.add(waiting(4, "phone", Priority::High), Utc(0));
         assert_eq!(queue.take(0, Mono(5_000)), Err(Hold::Until(Mono(65_000))), "an equally urgent one waits");
     }
@@ -396,17 +241,13 @@ mod tests {
     #[test]
     fn a_success_ends_the_rest_and_the_row_of_failures() {
         let mut queue = queue(10, [(1, Priority::Low), (2, Priority::Low)]);
-        let mut rows = Vec::new();
-        for now in [0, 60_000] {
+        for (now, row) in [(0, 1), (60_000, 2)] {
             queue.take(0, Mono(now)).unwrap();
-            queue.answered(0, &answer(LATER), vec![], (Mono(now), Utc(0)), |row| {
-                rows.push(row);
-                minute(row)
-            });
+            answered(&mut queue, 0, IN_A_MINUTE, after(now));
+            assert_eq!(queue.status()[0].failures, row);
         }
-        assert_eq!(rows, [1, 2]);
         queue.take(0, Mono(120_000)).unwrap();
-        queue.answered(0, &answer(Verdict::Taken), vec![], (Mono(120_000), Utc(0)), minute);
+        answered(&mut queue, 0, Verdict::Taken, after(120_000));
         assert_eq!(queue.status()[0].failures, 0);
         assert_eq!(queue.take(0, Mono(120_000)).unwrap().0.id, 2);
     }
@@ -414,17 +255,18 @@ mod tests {
     #[test]
     fn a_refused_notice_is_given_up_after_as_many_refusals_as_it_is_worth() {
         let mut queue = queue(10, [(1, Priority::Low)]);
+        let refused = Verdict::Refused { allowed: 2 };
+        let mut now = START;
         // What isn't a refusal doesn't count.
-        for verdict in [LATER, LATER, Verdict::Refused { allowed: 2 }] {
-            queue.take(0, Mono(0)).unwrap();
-            let outcome = queue.answered(0, &answer(verdict), vec![], AT, |_| Duration::ZERO).unwrap();
-            assert_eq!(outcome.delivery, Delivery::Waiting);
+        for verdict in [IN_A_MINUTE, IN_A_MINUTE, refused] {
+            queue.take(0, now.mono).unwrap();
+            assert_eq!(answered(&mut queue, 0, verdict, now).delivery, Delivery::Waiting);
+            now.mono = queue.status()[0].next_attempt.unwrap();
         }
-        queue.take(0, Mono(0)).unwrap();
-        let outcome =
-            queue.answered(0, &answer(Verdict::Refused { allowed: 2 }), b"b".into(), AT, minute).unwrap();
+        queue.take(0, now.mono).unwrap();
+        let outcome = answered(&mut queue, 0, refused, now);
         assert_eq!((outcome.attempts, outcome.delivery), (4, Delivery::GivenUp { at: Utc(0) }));
-        assert_eq!(outcome.body, b"b");
+        assert_eq!(outcome.body, b"bytes");
         assert_eq!(queue.status()[0].queued, 0);
     }
 
@@ -442,7 +284,7 @@ mod tests {
         let mut queue = queue(10, [(8, Priority::High), (3, Priority::Low)]);
         queue.take(0, Mono(0)).unwrap();
         assert!(queue.status()[0].sending);
-        queue.answered(0, &answer(LATER), vec![], AT, minute);
+        answered(&mut queue, 0, IN_A_MINUTE, START);
         let phone = ReceiverStatus {
             receiver: "phone".into(),
             queued: 2,

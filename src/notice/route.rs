@@ -5,8 +5,8 @@ use std::time::Duration;
 
 use chrono_tz::Tz;
 
-use super::NoticeError;
 use super::webhook::Webhook;
+use super::{NoticeError, json};
 use crate::alarm::Notice;
 use crate::clock::Clock;
 use crate::config::{Receiver, Route};
@@ -29,7 +29,7 @@ impl Sender {
     /// The bytes of `notice`: the same for the same notice and zone, whenever and however often it is called.
     pub(super) fn render(&self, notice: &Notice, zone: Tz) -> Vec<u8> {
         match self {
-            Sender::Webhook(_) => super::webhook::render(notice, zone),
+            Sender::Webhook(_) => json::render(notice, zone),
         }
     }
 

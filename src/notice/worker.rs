@@ -8,8 +8,8 @@ use tokio::sync::{Notify, mpsc, watch};
 use tokio::task::JoinSet;
 
 use super::NoticeError;
-use super::backoff::next_attempt;
-use super::queue::{Hold, Queue, ReceiverStatus};
+use super::lane::{Hold, ReceiverStatus};
+use super::queue::Queue;
 use super::route::{Answer, Sender, Verdict};
 use crate::alarm::{Delivery, Notice, Outcome};
 use crate::clock::Clock;
@@ -89,6 +89,10 @@ impl WorkerHandle {
     /// Hands notices over; returns at once. One whose idempotency key its receiver is known to have, or that waits
     /// already, is passed over.
     pub fn send(&self, notices: Vec<Waiting>) {
+        // The core calls this at every reading, and most have nothing to tell.
+        if notices.is_empty() {
+            return;
+        }
         let now = self.clock.now().utc;
         let mut queue = self.shared.lock();
         for waiting in notices {
@@ -199,16 +203,7 @@ impl Delivering {
 
     fn take_in(&self, notice: &Notice, answer: &Answer, body: Vec<u8>) -> Option<Outcome> {
         let now = self.clock.now();
-        let retry_after = match answer.verdict {
-            Verdict::Later { retry_after } => retry_after,
-            _ => None,
-        };
-        let mut failures = 0;
-        let wait = |in_a_row| {
-            failures = in_a_row;
-            next_attempt(in_a_row, retry_after, jitter())
-        };
-        let outcome = self.shared.lock().answered(self.lane, answer, body, (now.mono, now.utc), wait)?;
+        let (outcome, failures) = self.shared.lock().answered(self.lane, answer, body, now, jitter())?;
         let (receiver, said) = (&notice.receiver, &answer.said);
         match outcome.delivery {
             Delivery::GivenUp { .. } => {

@@ -8,11 +8,9 @@ mod notice;
 mod standing;
 mod time;
 mod understood;
-mod when;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;
-pub use when::{local_time, rfc3339};

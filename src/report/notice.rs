@@ -5,7 +5,7 @@ use std::time::Duration;
 
 use chrono_tz::Tz;
 
-use super::local_time;
+use super::time::{LocalTime, span};
 use crate::alarm::{Facts, Notice, NoticeKind};
 use crate::quantity::Uncertain;
 
@@ -60,7 +60,7 @@ fn title(notice: &Notice) -> String {
 fn raised(notice: &Notice, zone: Tz) -> Vec<String> {
     let mut lines = vec![format!("Alarm {}, priority {}.", about(notice, " for "), notice.priority.word())];
     lines.extend(figures(&notice.facts, Tense::Now));
-    lines.push(format!("Since {}.", local_time(notice.raised_at, zone)));
+    lines.push(format!("Since {}.", LocalTime::of(notice.raised_at, zone).in_full()));
     if !notice.advice.is_empty() {
         lines.push(format!("What to do: {}", notice.advice));
     }
@@ -72,8 +72,8 @@ fn returned(notice: &Notice, zone: Tz) -> Vec<String> {
     lines.extend(figures(&notice.facts, Tense::Past));
     let mut times = format!(
         "Raised at {}, returned at {}",
-        local_time(notice.raised_at, zone),
-        local_time(notice.at, zone)
+        LocalTime::of(notice.raised_at, zone).in_full(),
+        LocalTime::of(notice.at, zone).in_full()
     );
     // The labels of a host whose clock was set in between say nothing about how long it took.
     if let Ok(ms @ 1..) = u64::try_from(notice.at.0.saturating_sub(notice.raised_at.0)) {
@@ -85,7 +85,11 @@ fn returned(notice: &Notice, zone: Tz) -> Vec<String> {
 
 fn trial(notice: &Notice, zone: Tz) -> Vec<String> {
     vec![
-        format!("A trial of the receiver {}, asked for at {}.", notice.receiver, local_time(notice.at, zone)),
+        format!(
+            "A trial of the receiver {}, asked for at {}.",
+            notice.receiver,
+            LocalTime::of(notice.at, zone).in_full()
+        ),
         "No alarm stands behind it: if you can read this, notices reach you.".to_owned(),
     ]
 }
@@ -174,22 +178,6 @@ fn plain(value: f64, unit: &str) -> String {
             if unit.is_empty() { digits.to_owned() } else { format!("{digits} {unit}") }
         }
     }
-}
-
-/// A time span as its two largest parts: `35 s`, `27 min 50 s`, `3 h 5 min`, `2 d 4 h`.
-fn span(lasting: Duration) -> String {
-    let seconds = lasting.as_secs();
-    let parts = [
-        ("d", seconds / 86_400),
-        ("h", seconds / 3_600 % 24),
-        ("min", seconds / 60 % 60),
-        ("s", seconds % 60),
-    ];
-    let Some(first) = parts.iter().position(|(_, n)| *n > 0) else {
-        return format!("{} s", (lasting.as_secs_f64() * 10.0).round() / 10.0);
-    };
-    let shown = parts[first..].iter().take(2).filter(|(_, n)| *n > 0);
-    shown.map(|(unit, n)| format!("{n} {unit}")).collect::<Vec<_>>().join(" ")
 }
 
 #[cfg(test)]
@@ -337,14 +325,6 @@ mod tests {
         No alarm stands behind it: if you can read this, notices reach you.
         railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
         "#);
-    }
-
-    #[test]
-    fn spans_are_said_by_their_two_largest_parts() {
-        let said: Vec<_> = [0.0, 0.44, 59.9, 60.0, 3_725.0, 86_400.0, 187_200.0]
-            .map(|seconds| span(Duration::from_secs_f64(seconds)))
-            .into();
-        assert_eq!(said, ["0 s", "0.4 s", "59 s", "1 min", "1 h 2 min", "1 d", "2 d 4 h"]);
     }
 
     #[test]

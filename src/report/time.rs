@@ -27,6 +27,12 @@ impl LocalTime {
     pub fn people(self) -> String {
         self.0.format("%a %-d %b %H:%M:%S").to_string()
     }
+
+    /// For people who read it elsewhere or later: `18:42:10 CEST on Tue 6 Oct 2026`. The zone's short name tells the
+    /// two autumn hours apart.
+    pub fn in_full(self) -> String {
+        self.0.format("%H:%M:%S %Z on %a %-d %b %Y").to_string()
+    }
 }
 
 impl Serialize for LocalTime {
@@ -80,5 +86,16 @@ mod tests {
         assert_eq!(winter.rfc3339(), "2026-12-01T21:41:07+01:00");
         assert_eq!(winter.people(), "Tue 1 Dec 21:41:07");
         assert!(summer.rfc3339().ends_with("+02:00"));
+    }
+
+    #[test]
+    fn the_two_half_past_twos_of_the_autumn_night_are_told_apart() {
+        // The European Union's zones leave summer time at 01:00 UTC on the last Sunday of October (from memory).
+        let of = |ms| LocalTime::of(Utc(ms), chrono_tz::Europe::Berlin);
+        let (before, after) = (of(1_792_888_200_000), of(1_792_891_800_000)); // 00:30Z and 01:30Z on 25 October 2026
+        assert_eq!(before.in_full(), "02:30:00 CEST on Sun 25 Oct 2026");
+        assert_eq!(after.in_full(), "02:30:00 CET on Sun 25 Oct 2026");
+        assert_eq!(before.rfc3339(), "2026-10-25T02:30:00+02:00");
+        assert_eq!(after.rfc3339(), "2026-10-25T02:30:00+01:00");
     }
 }

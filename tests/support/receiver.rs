@@ -33,6 +33,8 @@ pub(crate) enum Mode {
     CloseInBody { status: u16 },
     /// Sends the answer's headers byte by byte and never comes to their end.
     SlowHeaders,
+    /// Sends headers without end, as fast as they are read.
+    EndlessHeaders,
     /// Sends an answer whose body never ends, as fast as it is read.
     EndlessBody { status: u16 },
 }
@@ -54,7 +56,7 @@ impl Mode {
         Mode::Answer { status: 307, headers: format!("Location: {location}\r\n"), body: Vec::new() }
     }
 
-    /// An answer of a few kilobytes that whoever decompresses it must hold as many megabytes for.
+    /// An answer of 65 kB that swells to 10 MB for whoever decompresses it.
     pub(crate) fn bomb(status: u16) -> Self {
         Mode::Answer { status, headers: "Content-Encoding: gzip\r\n".into(), body: gzip_of_zeros(40_000) }
     }
@@ -231,6 +233,12 @@ async fn answer(mut stream: TcpStream, mut modes: watch::Receiver<Mode>, log: Lo
             while !modes.has_changed().unwrap_or(true) {
                 stream.write_all(b"x").await?;
                 tokio::time::sleep(Duration::from_millis(5)).await;
+            }
+        }
+        Mode::EndlessHeaders => {
+            stream.write_all(b"HTTP/1.1 200 OK\r\nX-Endless: ").await?;
+            loop {
+                stream.write_all(&[b'x'; 4096]).await?;
             }
         }
         Mode::EndlessBody { status } => {
