@@ -1,0 +1,14 @@
+//! What readings say about the mains: 10-minute intervals, percentiles, events and excursions, supply rules and their
+//! verdicts, the household's day, and the tide table.
+//!
+//! Pure: slices and iterators in, figures out; no clock, no file, no socket. Readings become [`Interval`]s once
+//! ([`Aggregator`]); everything about days and weeks works on these, only events and excursions look at the readings.
+//! Nothing here claims a class of IEC 61000-4-30: a reading a second is no half-cycle value.
+
+mod events;
+mod interval;
+mod percentile;
+
+pub use events::{Event, EventKind, EventLimits, Sample, Spell, events, excursions};
+pub use interval::{Aggregator, INTERVAL, Interval, WHOLE_FROM, intervals, intervals_of};
+pub use percentile::Distribution;
