@@ -8,7 +8,11 @@
 mod events;
 mod interval;
 mod percentile;
+mod rules;
+mod verdict;
 
 pub use events::{Event, EventKind, EventLimits, Sample, Spell, events, excursions};
 pub use interval::{Aggregator, INTERVAL, Interval, WHOLE_FROM, intervals, intervals_of};
 pub use percentile::Distribution;
+pub use rules::{Bound, Clause, Flagged, Period, RuleError, Statistic, Status, SupplyRule, parse_rules};
+pub use verdict::{ClauseVerdict, Verdict};
