@@ -18,6 +18,7 @@
 //! | --- | --- | --- |
 //! | [`quantity`], [`reading`] | volts, instants, uncertain figures; channels, readings, quality | yes |
 //! | [`supply`] | from mains to every rail | yes |
+//! | [`mains`] | what readings say about the mains: intervals, events, rules, the day, the tide table | yes |
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
 //! | [`config`] | the TOML file into checked types | yes |
 //! | [`watch`] | one site's live state: readings in, decided alarms and notices out | yes |
@@ -35,6 +36,7 @@ pub mod clock;
 pub mod config;
 pub mod daemon;
 pub mod logger;
+pub mod mains;
 pub mod notice;
 pub mod quantity;
 pub mod reading;
