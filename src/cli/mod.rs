@@ -103,6 +103,11 @@ fn print(text: &str) -> anyhow::Result<()> {
     Ok(out.flush()?)
 }
 
+/// Says something beside the result, on standard error.
+fn remark(line: &str) -> anyhow::Result<()> {
+    Ok(writeln!(io::stderr().lock(), "{line}")?)
+}
+
 /// Prints `value` as JSON, indented: programs don't mind, people who look are glad.
 fn print_json(value: &impl serde::Serialize) -> anyhow::Result<()> {
     print(&(serde_json::to_string_pretty(value)? + "\n"))

@@ -36,7 +36,8 @@ pub(super) fn make_default_folder(site: &Site) -> anyhow::Result<()> {
     let default = default_store();
     match default.parent() {
         Some(folder) if site.store.path == default && !folder.as_os_str().is_empty() => {
-            std::fs::create_dir_all(folder).with_context(|| format!("the folder {} can't be made", folder.display()))
+            std::fs::create_dir_all(folder)
+                .with_context(|| format!("the folder {} can't be made", folder.display()))
         }
         _ => Ok(()),
     }

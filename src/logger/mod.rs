@@ -90,6 +90,19 @@ pub enum LineFault {
 }
 
 impl LineFault {
+    /// Its short name, in a tally.
+    pub fn word(self) -> &'static str {
+        match self {
+            LineFault::Garbage => "garbage",
+            LineFault::TooLong => "too long",
+            LineFault::Checksum => "wrong check sum",
+            LineFault::Malformed => "malformed",
+            LineFault::UnknownChannel => "unknown channel",
+            LineFault::BadValue => "bad value",
+            LineFault::Duplicate => "duplicate",
+        }
+    }
+
     /// What it means, for the log.
     pub fn sentence(self) -> &'static str {
         match self {
