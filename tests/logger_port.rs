@@ -145,7 +145,7 @@ fn an_unplugged_logger_is_found_again_behind_its_link() {
     assert!(lost.contains("was lost"), "{lost}");
     // Said while nobody could hear it.
     scene.said.say(&[("mains", Some(231_000))]).unwrap_err();
-    // The device is gone, the link leads nowhere.
+    // The device is gone, and the link with it.
     let missing = scene.heard.next_reason();
     assert!(missing.contains("is not there") && missing.contains("railtide ports"), "{missing}");
     scene.said.plug_in().unwrap();

@@ -157,8 +157,10 @@ impl SimulatedLogger {
         Ok(())
     }
 
-    /// Pulls the plug: the other end hangs up, and the link leads nowhere.
+    /// Pulls the plug: the link goes, and the other end hangs up.
     pub fn unplug(&self) {
+        // In this order: once the device is gone its path may become somebody else's, and the link would lead there.
+        self.remove_link();
         self.shared.lock().pty = None;
     }
 
@@ -175,6 +177,12 @@ impl SimulatedLogger {
         self.shared.lock().pty = Some(pty);
         Ok(())
     }
+
+    fn remove_link(&self) {
+        if let (Some(link), Some(device)) = (&self.shared.link, self.device()) {
+            remove_link(link, &device);
+        }
+    }
 }
 
 impl Drop for SimulatedLogger {
@@ -184,9 +192,7 @@ impl Drop for SimulatedLogger {
             // Its panic has been reported by its own thread.
             let _ = thread.join();
         }
-        if let (Some(link), Some(device)) = (&self.shared.link, self.device()) {
-            remove_link(link, &device);
-        }
+        self.remove_link();
     }
 }
 
@@ -332,6 +338,7 @@ mod tests {
         let held = open(&link);
         let before = logger.device().unwrap();
         logger.unplug();
+        assert!(link.symlink_metadata().is_err());
         assert_eq!(logger.say(&[("mains", Some(1))]).unwrap_err().kind(), io::ErrorKind::NotConnected);
         logger.plug_in().unwrap();
         assert_ne!(logger.device().unwrap(), before);
