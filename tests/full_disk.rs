@@ -3,6 +3,8 @@
 //! The disk is a small tmpfs in a mount namespace of the daemon's own. Where that isn't allowed (no root), the test
 //! says so and only the walk's own tests with a page limit cover the case.
 
+#![allow(clippy::print_stdout, reason = "what the drill met is worth reading")]
+
 mod support;
 
 use std::fs;

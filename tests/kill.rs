@@ -2,6 +2,8 @@
 //!
 //! `RAILTIDE_KILLS` sets the number of kills (20 here; `tests/slow/kills` takes 200).
 
+#![allow(clippy::print_stdout, reason = "what the drill met is worth reading")]
+
 mod support;
 
 use std::collections::BTreeMap;

@@ -187,11 +187,6 @@ fn judge_rail(rail: &RailFigures, mains_v: Option<f64>) -> Option<Judged> {
     };
     let (source, value, setpoint) =
         [projected, measured].into_iter().flatten().max_by(|a, b| excess(a).total_cmp(&excess(b)))?;
-    let note = match (source, rail.proved_on) {
-        ("projected", Some(true)) => "the amplifier is on",
-        ("projected", None) => "nothing proves that the amplifier is on",
-        _ => "",
-    };
     Some(Judged {
         subject: rail.subject(),
         value: value.map(|v| v.volts),
@@ -206,7 +201,8 @@ fn judge_rail(rail: &RailFigures, mains_v: Option<f64>) -> Option<Judged> {
             mains_v,
             source: source.to_owned(),
             loading: if source == "projected" { rail.loading.word().to_owned() } else { String::new() },
-            note: note.to_owned(),
+            proved_on: rail.proved_on,
+            note: String::new(),
         },
     })
 }

@@ -78,6 +78,9 @@ pub struct Facts {
     /// The loading that a projection assumes.
     #[serde(skip_serializing_if = "String::is_empty")]
     pub loading: String,
+    /// Whether something proves that the amplifier is on; absent where nothing tells, or it doesn't matter.
+    #[serde(skip_serializing_if = "Option::is_none")]
+    pub proved_on: Option<bool>,
     /// Whatever else there is to say, in plain words.
     #[serde(skip_serializing_if = "String::is_empty")]
     pub note: String,

@@ -7,7 +7,10 @@ use serde::Serialize;
 
 use super::Format;
 use crate::clock::Clock;
+use crate::config::Site;
+use crate::quantity::Utc;
 use crate::report::{AlarmLine, AlarmList, Standing, alarms_text, standing_text};
+use crate::store::Store;
 
 /// Arguments of `now`.
 #[derive(Debug, Args)]
@@ -29,15 +32,7 @@ impl Now {
         let site = super::site::load(config)?;
         let store = super::site::open_record(&site)?;
         let now = Clock::system().now().utc;
-        let stored = store.channels()?;
-        let latest = site
-            .channels()
-            .map(|(_, channel)| match stored.iter().find(|s| s.name == channel.name) {
-                Some(known) => store.latest_reading(known.id),
-                None => Ok(None),
-            })
-            .collect::<Result<Vec<_>, _>>()?;
-        let standing = Standing::new(&site, &super::site::rails(&site), &latest, now);
+        let standing = standing(&site, &store, now)?;
         let alarms = AlarmList::new(&store.alarms()?, false, site.time_zone, now);
         match self.format {
             Format::Json => super::print_json(&NowJson { standing, alarms: alarms.alarms }),
@@ -49,4 +44,17 @@ impl Now {
             }
         }
     }
+}
+
+/// Where things stand at `now`, by the record.
+pub(super) fn standing(site: &Site, store: &Store, now: Utc) -> anyhow::Result<Standing> {
+    let stored = store.channels()?;
+    let latest = site
+        .channels()
+        .map(|(_, channel)| match stored.iter().find(|s| s.name == channel.name) {
+            Some(known) => store.latest_reading(known.id),
+            None => Ok(None),
+        })
+        .collect::<Result<Vec<_>, _>>()?;
+    Ok(Standing::new(site, &super::site::rails(site), &latest, now))
 }

@@ -16,8 +16,9 @@ pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
         Some(file) => file,
         None => find()?,
     };
-    let bytes =
-        std::fs::read(&file).with_context(|| format!("the config file {} can't be read", file.display()))?;
+    let bytes = std::fs::read(&file).with_context(|| {
+        format!("the config file {} can't be read; name another with --config", file.display())
+    })?;
     let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
     let surroundings = Surroundings { conditions: &conditions, default_store: default_store() };
     Site::parse_bytes(&bytes, &file, &surroundings)

@@ -45,11 +45,6 @@ impl fmt::Display for Complaint {
 pub struct Complaints(Vec<Complaint>);
 
 impl Complaints {
-    /// One complaint about a file that could not even be read.
-    pub(super) fn of_file(file: &Path, says: String) -> Self {
-        Complaints(vec![Complaint { file: file.to_owned(), place: None, found: String::new(), says }])
-    }
-
     /// Each complaint, in the order of the lines.
     pub fn iter(&self) -> impl Iterator<Item = &Complaint> {
         self.0.iter()

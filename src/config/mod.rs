@@ -5,7 +5,7 @@
 //! comes as [`Site::warnings`]. Values of one kind of part (rectifiers, output valves) are data in the top-level
 //! `config/` folder.
 //!
-//! Pure but for [`Site::load`], which reads the one file that it's given.
+//! Pure: the command line reads the file.
 
 mod amplifier;
 mod circuit;

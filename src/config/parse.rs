@@ -25,21 +25,7 @@ pub struct Surroundings<'a> {
 }
 
 impl Site {
-    /// Reads the config file at `path`.
-    ///
-    /// # Errors
-    /// Every mistake of the file, or the one reason why it can't be read.
-    pub fn load(path: &Path, surroundings: &Surroundings<'_>) -> Result<Site, Complaints> {
-        let bytes = std::fs::read(path).map_err(|error| {
-            Complaints::of_file(
-                path,
-                format!("cannot be read ({error}); name another file with --config FILE"),
-            )
-        })?;
-        Site::parse_bytes(&bytes, path, surroundings)
-    }
-
-    /// The same for a file's content, which should be UTF-8.
+    /// Reads a config file's content, which should be UTF-8.
     ///
     /// # Errors
     /// Every mistake of the file; if it isn't UTF-8, where it stops being so.

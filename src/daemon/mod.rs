@@ -92,7 +92,7 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
                 walk.tick();
                 next_tick = clock.now().mono + TICK;
             }
-            Some(event) = events.recv() => walk.from_logger(event),
+            Some(event) = events.recv() => walk.take(event),
         }
     }
 
@@ -101,12 +101,12 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let mut stopped = tokio::task::spawn_blocking(move || stop_ports(ports));
     loop {
         tokio::select! {
-            Some(event) = events.recv() => walk.from_logger(event),
+            Some(event) = events.recv() => walk.take(event),
             _ = &mut stopped => break,
         }
     }
     while let Ok(event) = events.try_recv() {
-        walk.from_logger(event);
+        walk.take(event);
     }
     let (mut held, mut store, worker) = walk.finish();
     let stopped = worker.stop();
@@ -158,7 +158,8 @@ fn remembered(store: &Store) -> Result<(watch::Restored, store::Restored), Store
     Ok((for_watch, restored))
 }
 
-fn channel_specs(site: &Site) -> Vec<ChannelSpec> {
+/// What the record needs to know of every channel, in the order of [`Site::channels`].
+pub fn channel_specs(site: &Site) -> Vec<ChannelSpec> {
     site.channels()
         .map(|(_, channel)| ChannelSpec {
             name: channel.name.clone(),

@@ -61,7 +61,7 @@ impl Walk {
     }
 
     /// A logger spoke, or something happened to its line.
-    pub(super) fn from_logger(&mut self, from: FromLogger) {
+    pub(super) fn take(&mut self, from: FromLogger) {
         let FromLogger { logger, received, what } = from;
         match what {
             LoggerEvent::Sample(sample) => {
@@ -106,7 +106,6 @@ impl Walk {
 
     /// A notice was delivered, or wasn't.
     pub(super) fn outcome(&mut self, outcome: Outcome) {
-        tracing::info!(notice = outcome.notice_id, attempts = outcome.attempts, "{}", outcome.said);
         self.held.add_outcome(outcome);
         // At once: a delivery that isn't in the record yet would be repeated by a restart.
         self.commit();
@@ -242,5 +241,161 @@ fn log_transition(entry: &JournalEntry) {
             unit = facts.unit,
             "{line}"
         ),
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use crate::alarm::CONDITIONS;
+    use crate::clock::SimulatedClock;
+    use crate::config::Surroundings;
+    use crate::logger::Sample;
+    use crate::notice::Worker;
+    use crate::quantity::Utc;
+    use crate::store::{OpenOptions, OutboxEntry};
+
+    const HALL: &str = r#"
+[site]
+name = "hall"
+time_zone = "UTC"
+[store]
+path = "hall.db"
+commit_every = "10 s"
+[[logger]]
+name = "bench"
+port = "/dev/null"
+[[channel]]
+name = "mains"
+quantity = "mains_rms"
+[[amplifier]]
+name = "hall"
+[amplifier.measured]
+mains_v = 220
+rail_v = 452
+node = "reservoir"
+loading = "idle"
+[[amplifier.limit]]
+node = "reservoir"
+max_v = 480
+[[receiver]]
+name = "phone"
+webhook = "http://127.0.0.1:9/"
+"#;
+
+    /// A walk over a real record in a folder of its own; nobody listens at its receiver.
+    struct Scene {
+        folder: tempfile::TempDir,
+        walk: Walk,
+        hand: SimulatedClock,
+        lines: u64,
+    }
+
+    impl Scene {
+        fn new() -> Self {
+            let folder = tempfile::tempdir().unwrap();
+            let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
+            let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
+            let site = Site::parse(HALL, &folder.path().join("railtide.toml"), &surroundings).unwrap();
+            let (clock, hand) = Clock::simulated(Utc(1_790_000_000_000));
+            let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
+            let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
+            let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
+            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site), remembered, clock.now());
+            let time = TimeBase::new(clock.now(), restored.newest);
+            let (outcomes, _) = tokio::sync::mpsc::channel(64);
+            let worker =
+                Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcomes).unwrap();
+            let walk = Walk::new(&site, clock, time, watch, store, worker);
+            Scene { folder, walk, hand, lines: 0 }
+        }
+
+        /// One line a second for `seconds`.
+        fn mains(&mut self, volts: f64, seconds: u64) {
+            for _ in 0..seconds {
+                self.hand.advance(Duration::from_secs(1));
+                let sample = Sample { logger_ms: Some(self.lines * 1000), values: vec![(0, volts)] };
+                self.lines += 1;
+                let received = self.walk.clock.now();
+                self.walk.take(FromLogger { logger: 0, received, what: LoggerEvent::Sample(sample) });
+                self.walk.tick();
+            }
+        }
+
+        fn readings(&self) -> u64 {
+            self.number("SELECT count(*) FROM open")
+        }
+
+        fn number(&self, sql: &str) -> u64 {
+            let connection = rusqlite::Connection::open(self.folder.path().join("hall.db")).unwrap();
+            connection.query_row(sql, [], |row| row.get::<_, i64>(0)).unwrap() as u64
+        }
+
+        fn outbox(&self) -> Vec<OutboxEntry> {
+            self.walk.store.outbox(100).unwrap()
+        }
+    }
+
+    #[tokio::test]
+    async fn readings_wait_for_the_commit_interval_and_an_alarm_commits_at_once() {
+        let mut scene = Scene::new();
+        scene.mains(226.0, 9);
+        assert_eq!(scene.readings(), 0, "nothing is due yet");
+        scene.mains(226.0, 1);
+        assert_eq!(scene.readings(), 10);
+        scene.mains(238.0, 11);
+        assert_eq!(scene.readings(), 21, "the alarm of the eleventh high second took everything with it");
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
+        assert!(scene.outbox()[0].notice.recorded);
+    }
+
+    #[tokio::test]
+    async fn with_no_room_the_notice_is_handed_over_unrecorded_and_all_is_written_when_there_is_room() {
+        let mut scene = Scene::new();
+        scene.mains(226.0, 10);
+        let pages = scene.number("PRAGMA page_count") as u32;
+        scene.walk.store.limit_pages(Some(pages)).unwrap();
+        // Enough readings that no free page takes them.
+        scene.mains(226.0, 2_000);
+        assert!(scene.walk.store_failed);
+        scene.mains(238.0, 30);
+        let status = &scene.walk.notices.status()[0];
+        assert_eq!(status.queued, 1, "the notice waits at the worker, not behind the record");
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 0);
+
+        scene.walk.store.limit_pages(None).unwrap();
+        scene.mains(238.0, 10);
+        assert!(!scene.walk.store_failed);
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
+        assert_eq!(scene.walk.held.let_go(), 0);
+        assert!(!scene.outbox()[0].notice.recorded, "the record tells that it went out unrecorded");
+        assert_eq!(scene.readings() + scene.walk.held.readings() as u64, scene.lines, "no reading was lost");
+    }
+
+    #[tokio::test]
+    async fn a_record_that_has_become_read_only_keeps_no_alarm_back() {
+        let mut scene = Scene::new();
+        scene.mains(226.0, 10);
+        scene.walk.store.set_read_only(true).unwrap();
+        scene.mains(238.0, 30);
+        assert!(scene.walk.store_failed);
+        assert_eq!(scene.walk.notices.status()[0].queued, 1);
+        scene.walk.store.set_read_only(false).unwrap();
+        scene.mains(238.0, 12);
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
+        assert_eq!(scene.outbox().len(), 1);
+    }
+
+    #[tokio::test]
+    async fn a_clock_that_steps_back_flags_readings_and_delays_nothing() {
+        let mut scene = Scene::new();
+        scene.mains(226.0, 10);
+        scene.hand.step_utc(-3_600_000);
+        scene.mains(238.0, 12);
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1, "the on-delay ran on monotonic time");
+        scene.mains(238.0, 10);
+        assert_eq!(scene.readings() + scene.walk.held.readings() as u64, scene.lines);
+        let flagged = scene.number("SELECT count(*) FROM open WHERE quality = 1");
+        assert!(flagged >= 20, "{flagged} readings are marked clock doubtful");
     }
 }

@@ -134,6 +134,7 @@ mod tests {
                 mains_v: Some(239.3),
                 source: "projected".into(),
                 loading: "idle".into(),
+                proved_on: None,
                 note: String::new(),
             },
             advice: "Switch the amplifier off.".into(),
@@ -171,7 +172,7 @@ mod tests {
         "advice":"Switch the amplifier off.",
         "recorded":true,
         "title":"rail-high: hall.reservoir would stand at 492 V ± 4 V",
-        "text":"Alarm rail-high for hall.reservoir, priority high.\nIt would stand at 492 V ± 4 V, projected from mains at 239.3 V for the loading \"idle\"; the setpoint is 475.8 V, the limit 480 V.\nSince 18:42:10 CEST on Tue 6 Oct 2026.\nWhat to do: Switch the amplifier off.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
+        "text":"Alarm rail-high for hall.reservoir, priority high.\nIt would stand at 492 V ± 4 V, projected from mains at 239.3 V for the loading \"idle\"; the setpoint is 475.8 V, the limit 480 V.\nNothing proves that the amplifier is on.\nSince 18:42:10 CEST on Tue 6 Oct 2026.\nWhat to do: Switch the amplifier off.\nrailtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.",
         "caution":"railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe."}
         "#);
     }

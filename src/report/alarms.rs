@@ -120,6 +120,13 @@ fn facts_phrase(facts: &Facts) -> Option<String> {
         (source, Some(mains_v)) => how.push(format!("{source}, mains {mains_v:.1} V")),
         (source, None) => how.push(source.to_owned()),
     }
+    match facts.proved_on {
+        Some(true) => how.push("the amplifier is on".to_owned()),
+        None if facts.source == "projected" && !facts.loading.is_empty() => {
+            how.push("nothing proves that the amplifier is on".to_owned());
+        }
+        _ => {}
+    }
     if !facts.note.is_empty() {
         how.push(facts.note.clone());
     }

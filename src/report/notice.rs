@@ -24,8 +24,8 @@ pub struct NoticeText {
 
 /// `notice` in words, its times in `zone`.
 ///
-/// A figure that was projected "would stand at": nothing but the model says that it does. The same notice and zone
-/// give the same text whenever it is rendered.
+/// A figure that was projected "would stand at" where nothing proves that the amplifier is on. The same notice and
+/// zone give the same text whenever it is rendered.
 pub fn notice_text(notice: &Notice, zone: Tz) -> NoticeText {
     let mut title = title(notice);
     let mut lines = match notice.kind {
@@ -60,6 +60,7 @@ fn title(notice: &Notice) -> String {
 fn raised(notice: &Notice, zone: Tz) -> Vec<String> {
     let mut lines = vec![format!("Alarm {}, priority {}.", about(notice, " for "), notice.priority.word())];
     lines.extend(figures(&notice.facts, Tense::Now));
+    lines.extend(evidence(&notice.facts).map(str::to_owned));
     lines.push(format!("Since {}.", LocalTime::of(notice.raised_at, zone).in_full()));
     if !notice.advice.is_empty() {
         lines.push(format!("What to do: {}", notice.advice));
@@ -110,12 +111,22 @@ enum Tense {
     Past,
 }
 
+/// Whether the amplifier is on, where that is known of a rail.
+fn evidence(facts: &Facts) -> Option<&'static str> {
+    match (facts.source.as_str(), facts.proved_on) {
+        (_, Some(true)) => Some("A rail channel proves that the amplifier is on."),
+        ("projected", None) if !facts.loading.is_empty() => Some("Nothing proves that the amplifier is on."),
+        _ => None,
+    }
+}
+
 /// `would stand at 492 V ± 4 V`, `has lasted 35 s`.
 fn standing(facts: &Facts, tense: Tense) -> Option<String> {
     let figure = with_uncertainty(facts.value?, facts.value_u, &facts.unit);
     let verb = match (facts.unit.as_str(), facts.source.as_str(), tense) {
         ("s", _, Tense::Now) => "has lasted",
         ("s", _, Tense::Past) => "lasted",
+        (_, "projected", _) if facts.proved_on == Some(true) => "is taken to stand at",
         (_, "projected", _) => "would stand at",
         _ => "stands at",
     };
@@ -206,6 +217,7 @@ mod tests {
                 mains_v: Some(239.32),
                 source: "projected".into(),
                 loading: "idle".into(),
+                proved_on: None,
                 note: String::new(),
             },
             advice: "Switch the amplifier off until the mains is lower.".into(),
@@ -227,10 +239,20 @@ mod tests {
         --
         Alarm rail-high for hall.reservoir, priority high.
         It would stand at 492 V ± 4 V, projected from mains at 239.3 V for the loading "idle"; the setpoint is 475.8 V, the limit 480 V.
+        Nothing proves that the amplifier is on.
         Since 18:42:10 CEST on Tue 6 Oct 2026.
         What to do: Switch the amplifier off until the mains is lower.
         railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
         "#);
+    }
+
+    #[test]
+    fn a_projected_rail_of_an_amplifier_that_is_on_is_taken_to_stand_there() {
+        let mut notice = rail_high();
+        notice.facts.proved_on = Some(true);
+        let text = notice_text(&notice, Tz::Europe__Berlin);
+        assert!(text.title.ends_with("is taken to stand at 492 V ± 4 V"), "{}", text.title);
+        assert!(text.body.contains("A rail channel proves that the amplifier is on."), "{}", text.body);
     }
 
     #[test]

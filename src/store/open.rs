@@ -125,6 +125,12 @@ impl Store {
             .map_err(|e| self.fault(e))
     }
 
+    /// Lets every write fail as on a file system that has become read-only.
+    #[cfg(test)]
+    pub(crate) fn set_read_only(&self, read_only: bool) -> Result<(), StoreError> {
+        self.conn.pragma_update(None, "query_only", read_only).map_err(|e| self.fault(e))
+    }
+
     pub(super) fn fault(&self, error: rusqlite::Error) -> StoreError {
         StoreError::from_sqlite(&self.path, error)
     }

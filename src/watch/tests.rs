@@ -158,7 +158,7 @@ fn a_rail_channel_that_shows_the_amplifier_off_suppresses_and_switching_on_raise
     assert_eq!(evening.state("rail-high"), State::Suppressed { active: true });
     let on = evening.line(1, &[(0, 236.0), (1, 470.0)]);
     assert_eq!(on.notices.len(), 1);
-    assert_eq!(on.notices[0].facts.note, "the amplifier is on");
+    assert_eq!(on.notices[0].facts.proved_on, Some(true));
 }
 
 #[test]

@@ -3,6 +3,8 @@
 //!
 //! `cargo bench --bench delay`; the goal is a median under 50 ms and 99 % under 200 ms with the on-delay at zero.
 
+#![allow(clippy::print_stdout, reason = "a benchmark's result is what it prints")]
+
 #[path = "../support/mod.rs"]
 mod support;
 

@@ -1,5 +1,10 @@
 //! A bench for whole-program tests: a folder with a config, a pseudo-terminal that plays the logger, the built binary.
-#![allow(dead_code, unreachable_pub, reason = "each test program uses its own part of the bench")]
+#![allow(
+    dead_code,
+    unreachable_pub,
+    clippy::print_stderr,
+    reason = "each test program uses its own part of the bench"
+)]
 
 pub mod receiver;
 
@@ -309,8 +314,7 @@ impl Daemon {
     /// Asks it to stop and waits until it has.
     pub fn stop(mut self) -> std::process::ExitStatus {
         self.signal("TERM");
-        let status = self.child.wait().expect("the daemon ends");
-        status
+        self.child.wait().expect("the daemon ends")
     }
 
     /// SIGKILL: as a power cut, but for the file system's own buffers.
