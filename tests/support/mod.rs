@@ -312,8 +312,13 @@ impl Daemon {
     }
 
     /// Asks it to stop and waits until it has.
-    pub fn stop(mut self) -> std::process::ExitStatus {
+    pub fn stop(self) -> std::process::ExitStatus {
         self.signal("TERM");
+        self.wait()
+    }
+
+    /// Waits for its end.
+    pub fn wait(mut self) -> std::process::ExitStatus {
         self.child.wait().expect("the daemon ends")
     }
 
