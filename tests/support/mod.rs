@@ -6,6 +6,7 @@
     reason = "each test program uses its own part of the bench"
 )]
 
+pub mod peers;
 pub mod receiver;
 
 use std::fmt::Write as _;
