@@ -78,7 +78,7 @@ pub struct Tallies {
     pub too_old: u64,
 }
 
-const DIFFERING: &str = "differing_duplicates";
+pub(super) const DIFFERING: &str = "differing_duplicates";
 const TOO_OLD: &str = "too_old";
 /// Readings before this time, ms, have been dropped; their intervals stay as they are.
 pub(super) const FROZEN_BEFORE: &str = "frozen_before_ms";

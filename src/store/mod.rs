@@ -12,6 +12,8 @@ mod block;
 mod channels;
 mod columns;
 mod error;
+mod hours;
+mod intervals;
 mod lock;
 mod open;
 mod readings;
