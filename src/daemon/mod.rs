@@ -6,6 +6,7 @@
 mod alone;
 mod held;
 mod hush;
+mod upkeep;
 mod walk;
 
 use std::future::Future;

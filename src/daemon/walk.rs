@@ -13,6 +13,7 @@ use crate::watch::{Decided, Watch};
 
 use super::held::Held;
 use super::hush::Hush;
+use super::upkeep::Upkeep;
 
 /// After a commit that failed the next one is tried no sooner than this.
 const RETRY_COMMIT: Duration = Duration::from_secs(2);
@@ -31,6 +32,7 @@ pub(super) struct Walk {
     store_failed: bool,
     /// True until requests that were put before the start have been looked for.
     requests_unread: bool,
+    upkeep: Upkeep,
     hush: Hush,
 }
 
@@ -43,7 +45,8 @@ impl Walk {
         store: Store,
         notices: WorkerHandle,
     ) -> Self {
-        let commit_at = clock.now().mono + site.store.commit_every;
+        let start = clock.now().mono;
+        let commit_at = start + site.store.commit_every;
         Walk {
             clock,
             time,
@@ -56,6 +59,7 @@ impl Walk {
             commit_at,
             store_failed: false,
             requests_unread: true,
+            upkeep: Upkeep::new(start, site.store.keep_readings),
             hush: Hush::default(),
         }
     }
@@ -99,6 +103,11 @@ impl Walk {
         let decided = self.watch.tick(now);
         self.answer_requests(now);
         self.settle(decided);
+        if !self.store_failed
+            && let Err(error) = self.upkeep.turn(&mut self.store, now)
+        {
+            self.log_store_failure(&error, now.mono);
+        }
         for (what, times) in self.hush.overdue(now.mono) {
             tracing::warn!("{what} ({times} times more)");
         }
@@ -293,10 +302,14 @@ webhook = "http://127.0.0.1:9/"
 
     impl Scene {
         fn new() -> Self {
+            Scene::with(HALL)
+        }
+
+        fn with(config: &str) -> Self {
             let folder = tempfile::tempdir().unwrap();
             let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
             let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
-            let site = Site::parse(HALL, &folder.path().join("railtide.toml"), &surroundings).unwrap();
+            let site = Site::parse(config, &folder.path().join("railtide.toml"), &surroundings).unwrap();
             let (clock, hand) = Clock::simulated(Utc(1_790_000_000_000));
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
@@ -310,11 +323,11 @@ webhook = "http://127.0.0.1:9/"
             Scene { folder, walk, hand, lines: 0 }
         }
 
-        /// One line a second for `seconds`.
+        /// One line a second for `seconds`, with a little noise, as no channel that lives is without.
         fn mains(&mut self, volts: f64, seconds: u64) {
             for _ in 0..seconds {
                 self.hand.advance(Duration::from_secs(1));
-                let sample = Sample { logger_ms: Some(self.lines * 1000), values: vec![(0, volts)] };
+                let sample = Sample { logger_ms: Some(self.lines * 1000), values: vec![(0, volts + (self.lines % 7) as f64 * 0.01)] };
                 self.lines += 1;
                 let received = self.walk.clock.now();
                 self.walk.take(FromLogger { logger: 0, received, what: LoggerEvent::Sample(sample) });
@@ -347,6 +360,17 @@ webhook = "http://127.0.0.1:9/"
         assert_eq!(scene.readings(), 21, "the alarm of the eleventh high second took everything with it");
         assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
         assert!(scene.outbox()[0].notice.recorded);
+    }
+
+    #[tokio::test]
+    async fn hours_are_closed_as_time_goes_by_and_old_ones_let_go_where_the_owner_wants_that() {
+        let mut scene = Scene::with(&HALL.replace("commit_every", "keep_readings = \"2h\"\ncommit_every"));
+        scene.mains(226.0, 5 * 3600);
+        let hours = scene.number("SELECT count(*) FROM block");
+        assert!((2..=3).contains(&hours), "{hours} hours of readings are kept");
+        assert!(scene.readings() <= 2 * 3600, "closed hours leave no rows behind");
+        let intervals = scene.number("SELECT count(*) FROM interval");
+        assert!((24..=30).contains(&intervals), "intervals stay: {intervals}");
     }
 
     #[tokio::test]
