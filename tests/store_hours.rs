@@ -109,7 +109,7 @@ fn old_hours_are_let_go_their_intervals_stay_and_nothing_older_is_taken() {
     scene.commit(vec![old]);
     assert_eq!(scene.store.tallies().unwrap().too_old, 1);
     assert_eq!(
-        scene.store.merge_hour(scene.channel, 1000, vec![old]).unwrap(),
+        scene.store.merge_recording(scene.channel, 1000, vec![old]).unwrap(),
         1,
         "an import is refused by count"
     );
@@ -201,17 +201,7 @@ proptest! {
                 }
             }
             if merging {
-                let mut hours: BTreeMap<i64, BTreeMap<i64, Reading>> = BTreeMap::new();
-                for reading in readings {
-                    let hour = hours.entry(reading.at.0 / HOUR).or_default();
-                    let held = hour.entry(reading.at.0).or_insert(reading);
-                    if (reading.quality, -reading.value.0) < (held.quality, -held.value.0) {
-                        *held = reading;
-                    }
-                }
-                for (_, hour) in hours {
-                    scene.store.merge_hour(scene.channel, period_s * 1000, hour.into_values().collect()).unwrap();
-                }
+                scene.store.merge_recording(scene.channel, period_s * 1000, readings).unwrap();
             } else {
                 scene.commit(readings);
             }

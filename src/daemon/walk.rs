@@ -327,7 +327,10 @@ webhook = "http://127.0.0.1:9/"
         fn mains(&mut self, volts: f64, seconds: u64) {
             for _ in 0..seconds {
                 self.hand.advance(Duration::from_secs(1));
-                let sample = Sample { logger_ms: Some(self.lines * 1000), values: vec![(0, volts + (self.lines % 7) as f64 * 0.01)] };
+                let sample = Sample {
+                    logger_ms: Some(self.lines * 1000),
+                    values: vec![(0, volts + (self.lines % 7) as f64 * 0.01)],
+                };
                 self.lines += 1;
                 let received = self.walk.clock.now();
                 self.walk.take(FromLogger { logger: 0, received, what: LoggerEvent::Sample(sample) });

@@ -15,6 +15,8 @@ use crate::reading::{ChannelId, Reading};
 /// An hour is closed this long after its end, ms: by then even a slow commit has brought its last reading.
 const CLOSED_AFTER_MS: i64 = 5 * 60_000;
 
+/// Hours merged in one transaction: about 20 ms of work at one reading a second.
+const HOURS_AT_A_TIME: usize = 12;
 /// Blocks dropped in one transaction, so that it stays short.
 const DROPPED_AT_A_TIME: i64 = 96;
 /// Free pages handed back to the disk after that.
@@ -50,16 +52,25 @@ impl Store {
             .filter(|hour| hour.0 + HOUR_MS + CLOSED_AFTER_MS <= now.0))
     }
 
-    /// Merges `readings` of one channel and hour, in ascending order of time and each standing for `sample_period_ms`,
-    /// into what the record holds of it, in one transaction. How many were from before the time up to which readings
-    /// have been let go, and so were refused.
-    pub fn merge_hour(
+    /// Merges `readings` of one channel, in any order and each standing for `sample_period_ms`, into the closed hours,
+    /// some hours in a transaction so that none takes long. How many were from before the time up to which readings
+    /// have been let go, and so were refused. After an error the hours before it are stored; merging the same readings
+    /// again changes nothing.
+    pub fn merge_recording(
         &mut self,
         channel: ChannelId,
         sample_period_ms: u32,
-        readings: Vec<Reading>,
+        mut readings: Vec<Reading>,
     ) -> Result<u64, StoreError> {
-        merge_hour(&mut self.conn, channel, sample_period_ms, readings).map_err(|e| self.fault(e))
+        readings.sort_by_key(|r| (r.at, r.quality, std::cmp::Reverse(r.value)));
+        readings.dedup_by_key(|r| r.at);
+        let hours: Vec<&[Reading]> = readings.chunk_by(|a, b| hour_of(a.at) == hour_of(b.at)).collect();
+        let mut refused = 0;
+        for some in hours.chunks(HOURS_AT_A_TIME) {
+            refused +=
+                merge_hours(&mut self.conn, channel, sample_period_ms, some).map_err(|e| self.fault(e))?;
+        }
+        Ok(refused)
     }
 
     /// Lets go of closed hours that end before `before`, some at a time; their intervals stay, frozen. False when none
@@ -87,20 +98,23 @@ fn close(conn: &mut Connection, hour: Utc) -> rusqlite::Result<()> {
     tx.commit()
 }
 
-fn merge_hour(
+fn merge_hours(
     conn: &mut Connection,
     channel: ChannelId,
     sample_period_ms: u32,
-    mut readings: Vec<Reading>,
+    hours: &[&[Reading]],
 ) -> rusqlite::Result<u64> {
     let tx = conn.transaction_with_behavior(TransactionBehavior::Immediate)?;
     let frozen_before = number(&tx, FROZEN_BEFORE)?.unwrap_or(i64::MIN);
-    let all = readings.len();
-    readings.retain(|r| r.at.0 >= frozen_before);
-    let refused = (all - readings.len()) as u64;
-    if let Some(hour) = readings.first().map(|first| hour_of(first.at)) {
-        pack(&tx, channel, hour, sample_period_ms, readings)?;
-        refresh_intervals(&tx, channel, hour)?;
+    let mut refused = 0;
+    for readings in hours {
+        let old = readings.partition_point(|r| r.at.0 < frozen_before);
+        refused += old as u64;
+        if let Some(first) = readings.get(old) {
+            let hour = hour_of(first.at);
+            pack(&tx, channel, hour, sample_period_ms, readings[old..].to_vec())?;
+            refresh_intervals(&tx, channel, hour)?;
+        }
     }
     tx.commit()?;
     Ok(refused)

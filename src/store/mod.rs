@@ -11,6 +11,7 @@ mod batch;
 mod block;
 mod channels;
 mod columns;
+mod copy;
 mod error;
 mod hours;
 mod intervals;
