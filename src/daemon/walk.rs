@@ -11,6 +11,7 @@ use crate::quantity::{Moment, Mono};
 use crate::store::{Answer, PendingRequest, Store, StoreError};
 use crate::watch::{Decided, Watch};
 
+use super::early::Early;
 use super::held::Held;
 use super::hush::Hush;
 use super::upkeep::Upkeep;
@@ -22,6 +23,7 @@ const RETRY_COMMIT: Duration = Duration::from_secs(2);
 pub(super) struct Walk {
     clock: Clock,
     time: TimeBase,
+    early: Early,
     watch: Watch,
     held: Held,
     store: Store,
@@ -41,6 +43,7 @@ impl Walk {
         site: &Site,
         clock: Clock,
         time: TimeBase,
+        early: Early,
         watch: Watch,
         store: Store,
         notices: WorkerHandle,
@@ -50,6 +53,7 @@ impl Walk {
         Walk {
             clock,
             time,
+            early,
             watch,
             held: Held::default(),
             store,
@@ -128,12 +132,13 @@ impl Walk {
 
     /// Holds what was decided, commits it when it's urgent or due, and only then tells receivers. If the commit
     /// fails, they are told at once from memory, marked "not recorded".
-    fn settle(&mut self, decided: Decided) {
+    fn settle(&mut self, mut decided: Decided) {
         let urgent = !decided.journal.is_empty();
         for entry in &decided.journal {
             log_transition(entry);
         }
         let mut notices = decided.notices.clone();
+        self.held.add_waiting(self.early.hold_back(&self.time, &mut decided.readings));
         self.held.add(decided);
         if urgent || self.clock.now().mono >= self.commit_at {
             let recorded = self.commit();
@@ -202,6 +207,7 @@ impl Walk {
                 "the host's clock has stepped; delays are not affected, readings are flagged until it has caught up"
             );
         }
+        self.held.add_placed(self.early.look(&self.clock, &self.time));
     }
 
     /// The present moment with UTC as readings are labelled.
@@ -306,20 +312,32 @@ webhook = "http://127.0.0.1:9/"
         }
 
         fn with(config: &str) -> Self {
-            let folder = tempfile::tempdir().unwrap();
+            Scene::at(config, tempfile::tempdir().unwrap(), 1_790_000_000_000)
+        }
+
+        /// The next run on the same record, by a host whose clock shows `start_ms`.
+        fn again(self, start_ms: i64) -> Self {
+            let Scene { folder, walk, .. } = self;
+            walk.finish();
+            Scene::at(HALL, folder, start_ms)
+        }
+
+        fn at(config: &str, folder: tempfile::TempDir, start_ms: i64) -> Self {
             let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
             let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
             let site = Site::parse(config, &folder.path().join("railtide.toml"), &surroundings).unwrap();
-            let (clock, hand) = Clock::simulated(Utc(1_790_000_000_000));
+            let (clock, hand) = Clock::simulated(Utc(start_ms));
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
             let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
             let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site), remembered, clock.now());
             let time = TimeBase::new(clock.now(), restored.newest);
+            let (early, placed) = Early::begin(&clock, &time, &restored);
+            store.commit(&crate::store::Batch { placed, ..Default::default() }).unwrap();
             let (outcomes, _) = tokio::sync::mpsc::channel(64);
             let worker =
                 Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcomes).unwrap();
-            let walk = Walk::new(&site, clock, time, watch, store, worker);
+            let walk = Walk::new(&site, clock, time, early, watch, store, worker);
             Scene { folder, walk, hand, lines: 0 }
         }
 
@@ -411,6 +429,47 @@ webhook = "http://127.0.0.1:9/"
         scene.mains(238.0, 12);
         assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
         assert_eq!(scene.outbox().len(), 1);
+    }
+
+    #[tokio::test]
+    async fn before_the_clock_is_set_readings_wait_alarms_work_and_then_each_gets_its_true_time() {
+        let start = 1_790_000_000_000;
+        let mut scene = Scene::new();
+        scene.mains(226.0, 20);
+        // No battery clock: the host wakes up a day before what is stored.
+        let mut scene = scene.again(start - 86_400_000);
+        scene.mains(238.0, 30);
+        assert_eq!(scene.readings(), 20, "nothing new among the readings");
+        let waiting = scene.number("SELECT count(*) FROM waiting");
+        assert!((20..=30).contains(&waiting), "{waiting} wait");
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1, "the alarm is raised all the same");
+        // The network comes: it is an hour later than when the record ends.
+        scene.hand.step_utc(86_400_000 + 3_600_000);
+        scene.mains(238.0, 10);
+        assert_eq!(scene.number("SELECT count(*) FROM waiting"), 0);
+        let (first, good) = (
+            scene.number("SELECT min(t_ms) FROM open WHERE mv > 230000"),
+            scene.number("SELECT count(*) FROM open WHERE mv > 230000 AND quality = 0"),
+        );
+        assert_eq!(
+            first as i64,
+            start + 3_600_000 + 1000,
+            "the first of them, a second after the host woke up"
+        );
+        assert_eq!(good + scene.walk.held.readings() as u64, 40);
+    }
+
+    #[tokio::test]
+    async fn what_a_run_left_waiting_is_kept_by_the_next_behind_the_record_and_flagged() {
+        let start = 1_790_000_000_000;
+        let mut scene = Scene::new();
+        scene.mains(226.0, 20);
+        let mut scene = scene.again(start - 86_400_000);
+        scene.mains(229.0, 20);
+        let scene = scene.again(start + 3_600_000);
+        assert_eq!(scene.number("SELECT count(*) FROM waiting"), 0);
+        assert_eq!(scene.number("SELECT count(*) FROM open WHERE quality = 1"), 20);
+        assert_eq!(scene.readings(), 40);
     }
 
     #[tokio::test]

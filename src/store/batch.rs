@@ -67,6 +67,8 @@ pub struct PlacedSession {
     pub session: u32,
     /// UTC when its monotonic clock stood at zero.
     pub utc_of_zero: Utc,
+    /// Whether that is sure: then what was flagged for its time alone is good.
+    pub sure: bool,
 }
 
 /// What the record has met in its life that it could not simply keep.
@@ -199,7 +201,10 @@ fn take_placed(tx: &Connection, placed: &PlacedSession) -> rusqlite::Result<Vec<
                 at: Utc(placed.utc_of_zero.0 + row.get::<_, i64>(0)?),
                 channel: ChannelId(row.get(1)?),
                 value: Millivolts(row.get(2)?),
-                quality: quality(row, 3)?,
+                quality: match quality(row, 3)? {
+                    Quality::ClockDoubtful if placed.sure => Quality::Good,
+                    other => other,
+                },
             })
         })?
         .collect::<rusqlite::Result<Vec<_>>>()?;
