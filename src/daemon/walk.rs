@@ -112,6 +112,11 @@ impl Walk {
         {
             self.log_store_failure(&error, now.mono);
         }
+        match self.upkeep.room(&self.store, now) {
+            Ok(Some(room)) => self.watch.set_room(room),
+            Ok(None) => {}
+            Err(error) => self.log_store_failure(&error, now.mono),
+        }
         for (what, times) in self.hush.overdue(now.mono) {
             tracing::warn!("{what} ({times} times more)");
         }

@@ -16,7 +16,8 @@ pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches}
 use std::time::Duration;
 
 use crate::alarm::{
-    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction, State,
+    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction,
+    RoomFigures, State,
 };
 use crate::config::{Amplifier, Site};
 use crate::quantity::{Moment, Mono};
@@ -69,6 +70,7 @@ pub struct Watch {
     channels: Vec<WatchedChannel>,
     rails: Vec<RailWatch>,
     parts: Vec<PartWatch>,
+    room: Option<RoomFigures>,
     ledger: Ledger,
 }
 
@@ -125,6 +127,7 @@ impl Watch {
             channels,
             rails: rail_watches(site, projectors),
             parts: part_watches(site, projectors),
+            room: None,
             ledger: Ledger::new(site, restored),
         }
     }
@@ -146,6 +149,11 @@ impl Watch {
     /// Learns that a logger's port is not open, and why.
     pub fn disconnected(&mut self, logger: usize, why: String) {
         self.loggers[logger].disconnected = Some(why);
+    }
+
+    /// Learns how much room there is for the record.
+    pub fn set_room(&mut self, room: RoomFigures) {
+        self.room = Some(room);
     }
 
     /// Lets time pass: delays run out, figures grow old, silence is noticed.
@@ -185,6 +193,7 @@ impl Watch {
                 })
                 .collect(),
             rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
+            room: self.room,
             ..Figures::default()
         };
         for part in &self.parts {
