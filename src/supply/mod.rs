@@ -5,12 +5,25 @@
 
 mod circuit;
 mod curve;
+mod device;
+mod measures;
+mod mesh;
+mod network;
+mod paths;
+mod period;
+mod shooting;
+mod stage;
+mod steady;
+mod wave;
 
 pub use circuit::{
     Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, Loading, MainsWave, RectifierCircuit,
     Section, SeriesPart, Transformer, Winding,
 };
 pub use curve::{Measured, RailCurve};
+pub use steady::{
+    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work, steady_state,
+};
 
 use crate::quantity::Uncertain;
 
