@@ -1,6 +1,6 @@
 //! The daemon: starts the loggers' threads, the notice worker and the walk, joins them, stops them.
 //!
-//! One task walks every reading through the house ([`walk`]): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
+//! One task walks every reading through the house (the module `walk`): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
 //! ─▶ notice. Loggers and the notice worker speak to it over bounded channels and know nothing of one another.
 
 mod alone;
