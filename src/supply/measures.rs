@@ -142,11 +142,8 @@ fn inverse_v(net: &Network, stage: &Stage, y: &[f64], emf: f64) -> f64 {
     }
     // With no current a choke holds no voltage, so the output stands at its node.
     let output = if positive + negative > 0.0 { stage.output_v } else { stage.v[0] };
-    let dropped = if through > 0.0 {
-        drop.volts(through).0
-    } else {
-        (emf.abs() - output).clamp(0.0, drop.knee_v)
-    };
+    let dropped =
+        if through > 0.0 { drop.volts(through).0 } else { (emf.abs() - output).clamp(0.0, drop.knee_v) };
     let raised = output + dropped;
     match net.wiring {
         RectifierCircuit::Bridge => match (positive > 0.0, negative > 0.0) {

@@ -46,9 +46,8 @@ impl Mesh {
         if windows.is_empty() || inside > WIDE * span {
             return Mesh::even(wave, span, steps);
         }
-        let count = |length: f64, of: f64, share: f64| {
-            ((steps as f64 * share * length / of).ceil() as usize).max(4)
-        };
+        let count =
+            |length: f64, of: f64, share: f64| ((steps as f64 * share * length / of).ceil() as usize).max(4);
         let mut pieces = Vec::with_capacity(2 * windows.len() + 1);
         let mut at = 0.0;
         let gap = |pieces: &mut Vec<_>, from: f64, to: f64| {

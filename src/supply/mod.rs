@@ -6,6 +6,9 @@
 mod circuit;
 mod curve;
 mod device;
+mod discharge;
+mod findings;
+pub mod fit;
 mod measures;
 mod mesh;
 mod network;
@@ -21,8 +24,14 @@ pub use circuit::{
     Section, SeriesPart, Transformer, Winding,
 };
 pub use curve::{Measured, RailCurve};
+pub use discharge::{Discharge, SAFE_V, discharge};
+pub use findings::{
+    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, is_known, rectifier_findings,
+    soft_source,
+};
 pub use steady::{
-    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work, steady_state,
+    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
+    steady_state,
 };
 
 use crate::quantity::Uncertain;

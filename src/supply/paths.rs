@@ -131,7 +131,8 @@ impl PathParts {
     ) -> Option<(f64, f64)> {
         let m = self.devices;
         let highest = (drive / m).sqrt();
-        let mut s = if guess > 1e-4 * k * highest.powi(3) { (guess / k).cbrt().min(highest) } else { highest };
+        let mut s =
+            if guess > 1e-4 * k * highest.powi(3) { (guess / k).cbrt().min(highest) } else { highest };
         for _ in 0..MOST_STEPS {
             let i = k * s * s * s;
             let (mut excess, mut slope) = (m * s * s + ohm * i - drive, 2.0 * m * s + 3.0 * ohm * k * s * s);

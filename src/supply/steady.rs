@@ -228,15 +228,7 @@ impl<'a> Solver<'a> {
             return Err(refuse(format!("{} steps in half a period are too few, 8 at least", options.steps)));
         }
         let half = net.symmetric && circuit.wave.is_half_wave_symmetric();
-        Ok(Solver {
-            circuit,
-            loading,
-            options,
-            net,
-            half,
-            peaks: circuit.wave.peaks(),
-            earlier: None,
-        })
+        Ok(Solver { circuit, loading, options, net, half, peaks: circuit.wave.peaks(), earlier: None })
     }
 
     /// The steady state at `mains_v` r.m.s.
@@ -248,7 +240,8 @@ impl<'a> Solver<'a> {
             let what = format!("a mains of {mains_v} V is no mains");
             return Err(SolveError::Circuit { amplifier: self.circuit.amplifier.clone(), what });
         }
-        let emf_v = self.circuit.transformer.secondary_v.value * mains_v / self.circuit.transformer.wound_for_v;
+        let emf_v =
+            self.circuit.transformer.secondary_v.value * mains_v / self.circuit.transformer.wound_for_v;
         if self.net.draws_nothing || self.rest_v(emf_v) <= 0.0 {
             return Ok(self.at_rest(mains_v, emf_v));
         }
@@ -297,13 +290,8 @@ impl<'a> Solver<'a> {
         start: Vec<f64>,
         residual: f64,
     ) -> Result<Periodic, SolveError> {
-        let drive = Drive {
-            net: &self.net,
-            mesh,
-            emf_v,
-            period_s: 1.0 / self.circuit.frequency_hz,
-            half: self.half,
-        };
+        let drive =
+            Drive { net: &self.net, mesh, emf_v, period_s: 1.0 / self.circuit.frequency_hz, half: self.half };
         let scale = self.scale(emf_v);
         let goal = Goal {
             residual,
@@ -537,9 +525,7 @@ impl<'a> Solver<'a> {
 
     fn dropper(&self, seen: &Measures) -> Option<DropperState> {
         let (loss_w, through_a, knee_v) = match self.circuit.dropper.as_ref()? {
-            Dropper::LineResistor(_) => {
-                (seen.nodes[1].line_dropper_w, seen.nodes[1].series_a, 0.0)
-            }
+            Dropper::LineResistor(_) => (seen.nodes[1].line_dropper_w, seen.nodes[1].series_a, 0.0),
             _ => (seen.return_drop_w, seen.return_a, self.net.parts.drop.knee_v),
         };
         let mean_v = if through_a > 0.0 { loss_w / through_a } else { knee_v };

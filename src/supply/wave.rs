@@ -29,8 +29,8 @@ impl MainsWave {
             let top = (0..PEAK_SAMPLES)
                 .max_by(|&a, &b| (sign * sample(a)).total_cmp(&(sign * sample(b))))
                 .unwrap_or_default();
-            let [left, middle, right] =
-                [top + PEAK_SAMPLES - 1, top + PEAK_SAMPLES, top + PEAK_SAMPLES + 1].map(|i| sign * sample(i));
+            let [left, middle, right] = [top + PEAK_SAMPLES - 1, top + PEAK_SAMPLES, top + PEAK_SAMPLES + 1]
+                .map(|i| sign * sample(i));
             let bend = left - 2.0 * middle + right;
             if bend < 0.0 { middle - (right - left).powi(2) / (8.0 * bend) } else { middle }
         };
