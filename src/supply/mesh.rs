@@ -39,13 +39,24 @@ impl Mesh {
         Mesh::of(wave, &[(0.0, span, steps)])
     }
 
-    /// About `steps` steps over `span`, most of them in the `windows` (in order, from 0 to `span`).
-    pub(super) fn refined(wave: &MainsWave, span: f64, steps: usize, windows: &[Window]) -> Mesh {
-        let windows = widened(windows, span);
-        let inside = windows.iter().map(|(from, to)| to - from).sum::<f64>();
-        if windows.is_empty() || inside > WIDE * span {
+    /// About `steps` steps over `span`, most of them where a diode `conducts`; where that is nearly always, as behind a
+    /// choke, in the `overlaps` in which both paths do. (Windows in order, from 0 to `span`.)
+    pub(super) fn refined(
+        wave: &MainsWave,
+        span: f64,
+        steps: usize,
+        conducts: &[Window],
+        overlaps: &[Window],
+    ) -> Mesh {
+        let length = |windows: &[Window]| windows.iter().map(|(from, to)| to - from).sum::<f64>();
+        let Some(windows) = [conducts, overlaps]
+            .map(|windows| widened(windows, span))
+            .into_iter()
+            .find(|windows| !windows.is_empty() && length(windows) <= WIDE * span)
+        else {
             return Mesh::even(wave, span, steps);
-        }
+        };
+        let inside = length(&windows);
         let count = |length: f64, of: f64, share: f64| {
             ((steps as f64 * share * length / of).ceil() as usize).max(4)
         };
@@ -100,7 +111,7 @@ mod tests {
     #[test]
     fn the_steps_fill_the_span_without_a_gap_and_are_finest_in_the_windows() {
         let windows = [(0.19, 0.26), (0.7, 0.76)];
-        let mesh = Mesh::refined(&MainsWave::default(), 1.0, 100, &windows);
+        let mesh = Mesh::refined(&MainsWave::default(), 1.0, 100, &windows, &[]);
         let mut at = 0.0;
         for step in &mesh.steps {
             assert!((step.start - at).abs() < 1e-12);

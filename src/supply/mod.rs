@@ -14,6 +14,10 @@ mod period;
 mod shooting;
 mod stage;
 mod steady;
+#[cfg(test)]
+mod published;
+#[cfg(test)]
+mod test_circuits;
 mod wave;
 
 pub use circuit::{

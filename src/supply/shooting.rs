@@ -58,7 +58,7 @@ pub(super) fn shoot(
     let mut residual = f64::INFINITY;
     for tries in 1..=goal.tries {
         let walk = walker.walk(drive, &here).map_err(NoPeriod::Stuck)?;
-        if walk.windows.is_empty() {
+        if walk.conducts.is_empty() {
             // Above every peak nothing says how far: a constant current would take it down for ever.
             lower(&mut here, goal);
             last = None;

@@ -1,6 +1,6 @@
 //! The supply's periodic steady state at one mains voltage and loading, and the solver that finds it.
 
-use super::circuit::{Circuit, Dropper, Loading, RectifierCircuit, SeriesPart};
+use super::circuit::{Circuit, Dropper, Loading, RectifierCircuit};
 use super::measures::{Measures, PathMeasure};
 use super::mesh::{Mesh, Window};
 use super::network::Network;
@@ -32,7 +32,20 @@ impl Default for SolveOptions {
 pub struct Warm {
     mains_v: f64,
     state: Vec<f64>,
-    windows: Vec<Window>,
+    conducts: Vec<Window>,
+    overlaps: Vec<Window>,
+}
+
+impl Warm {
+    fn new(mains_v: f64, periodic: &Periodic) -> Warm {
+        let Periodic { state, walk, .. } = periodic;
+        Warm {
+            mains_v,
+            state: state.clone(),
+            conducts: walk.conducts.clone(),
+            overlaps: walk.overlaps.clone(),
+        }
+    }
 }
 
 /// Why a supply has no answer.
@@ -261,7 +274,7 @@ impl<'a> Solver<'a> {
             },
             None => self.solve_cold(mains_v, emf_v)?,
         };
-        let warm = Warm { mains_v, state: periodic.state.clone(), windows: periodic.walk.windows.clone() };
+        let warm = Warm::new(mains_v, &periodic);
         self.earlier = self.options.warm.replace(warm.clone());
         Ok(self.describe(mains_v, &periodic, Work { walks, steps }, warm))
     }
@@ -270,7 +283,7 @@ impl<'a> Solver<'a> {
         let mesh = self.even_mesh();
         let start = self.cold_start(emf_v);
         let rough = self.shoot(mains_v, emf_v, &mesh, start, self.options.residual.max(1e-4))?;
-        let warm = Warm { mains_v, state: rough.state, windows: rough.walk.windows };
+        let warm = Warm::new(mains_v, &rough);
         let (fine, walks, steps) = self.solve_from(mains_v, emf_v, &warm)?;
         Ok((fine, rough.tries + walks, steps))
     }
@@ -282,7 +295,7 @@ impl<'a> Solver<'a> {
         warm: &Warm,
     ) -> Result<(Periodic, usize, usize), SolveError> {
         let wave = &self.circuit.wave;
-        let mesh = Mesh::refined(wave, self.span(), self.steps(), &warm.windows);
+        let mesh = Mesh::refined(wave, self.span(), self.steps(), &warm.conducts, &warm.overlaps);
         let start = warm.state.iter().map(|x| x * mains_v / warm.mains_v).collect();
         let found = self.shoot(mains_v, emf_v, &mesh, start, self.options.residual)?;
         let tries = found.tries;
@@ -545,9 +558,4 @@ impl<'a> Solver<'a> {
         let mean_v = if through_a > 0.0 { loss_w / through_a } else { knee_v };
         Some(DropperState { mean_v, loss_w })
     }
-}
-
-/// Whether the filter begins with a choke, so that the rail is the mean of the rectified wave and not its peak.
-pub(super) fn is_choke_input(circuit: &Circuit) -> bool {
-    matches!(circuit.filter.first().map(|section| section.series), Some(SeriesPart::Choke { .. }))
 }
