@@ -1,5 +1,5 @@
-//! What one period showed: integrals by the method's own weights, so that charge is balanced exactly, and extremes at
-//! the ends of the steps.
+//! What one period showed: integrals by the method's own weights, so that charge is balanced exactly, and extremes:
+//! of the voltages at every stage, of the currents at the ends of the steps.
 
 use super::circuit::RectifierCircuit;
 use super::network::Network;
@@ -87,6 +87,10 @@ impl Measures {
                 sum.esr_w += weight * shunt.esr_ohm * stage.shunt_i[k].powi(2);
             }
         }
+        for (sum, &v) in self.nodes.iter_mut().zip(&stage.v) {
+            sum.lowest_v = sum.lowest_v.min(v);
+            sum.highest_v = sum.highest_v.max(v);
+        }
         let [positive, negative] = stage.paths.i;
         let winding = positive - negative;
         self.source_w += weight * emf * winding;
@@ -105,13 +109,17 @@ impl Measures {
         }
     }
 
-    /// Looks at the extremes at a step's end.
+    /// Looks at the extremes of the currents and of the inverse voltage at a step's end.
     /// The step took `seconds` and began with the states `before`.
-    pub(super) fn look(&mut self, net: &Network, stage: &Stage, y: &[f64], emf: f64, before: &[f64], seconds: f64) {
-        for (sum, &v) in self.nodes.iter_mut().zip(&stage.v) {
-            sum.lowest_v = sum.lowest_v.min(v);
-            sum.highest_v = sum.highest_v.max(v);
-        }
+    pub(super) fn look(
+        &mut self,
+        net: &Network,
+        stage: &Stage,
+        y: &[f64],
+        emf: f64,
+        before: &[f64],
+        seconds: f64,
+    ) {
         let [positive, negative] = stage.paths.i;
         self.paths[0].peak_a = self.paths[0].peak_a.max(positive);
         self.paths[1].peak_a = self.paths[1].peak_a.max(negative);

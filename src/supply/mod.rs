@@ -11,11 +11,11 @@ mod mesh;
 mod network;
 mod paths;
 mod period;
+#[cfg(test)]
+mod published;
 mod shooting;
 mod stage;
 mod steady;
-#[cfg(test)]
-mod published;
 #[cfg(test)]
 mod test_circuits;
 mod wave;
@@ -26,7 +26,8 @@ pub use circuit::{
 };
 pub use curve::{Measured, RailCurve};
 pub use steady::{
-    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work, steady_state,
+    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
+    steady_state,
 };
 
 use crate::quantity::Uncertain;

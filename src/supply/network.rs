@@ -70,9 +70,10 @@ pub(super) struct Node {
 impl Node {
     /// All that draws from the node at `v`, and its slope, A and S.
     pub(super) fn drawn(&self, v: f64) -> (f64, f64) {
-        self.laws.iter().map(|law| law.current(v)).fold((self.siemens * v, self.siemens), |sum, one| {
-            (sum.0 + one.0, sum.1 + one.1)
-        })
+        self.laws
+            .iter()
+            .map(|law| law.current(v))
+            .fold((self.siemens * v, self.siemens), |sum, one| (sum.0 + one.0, sum.1 + one.1))
     }
 }
 

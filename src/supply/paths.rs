@@ -131,7 +131,8 @@ impl PathParts {
     ) -> Option<(f64, f64)> {
         let m = self.devices;
         let highest = (drive / m).sqrt();
-        let mut s = if guess > 1e-4 * k * highest.powi(3) { (guess / k).cbrt().min(highest) } else { highest };
+        let mut s =
+            if guess > 1e-4 * k * highest.powi(3) { (guess / k).cbrt().min(highest) } else { highest };
         for _ in 0..MOST_STEPS {
             let i = k * s * s * s;
             let (mut excess, mut slope) = (m * s * s + ohm * i - drive, 2.0 * m * s + 3.0 * ohm * k * s * s);
@@ -222,8 +223,7 @@ mod tests {
     fn left(parts: &PathParts, balance: &Balance, i: [f64; 2]) -> [f64; 2] {
         [0, 1].map(|path| {
             let other = 1 - path;
-            let device_v =
-                if i[path] > 0.0 { parts.diode.volts(i[path]).0 } else { parts.diode.knee_v() };
+            let device_v = if i[path] > 0.0 { parts.diode.volts(i[path]).0 } else { parts.diode.knee_v() };
             let through = if parts.drop_in == DropIn::Shared { i[0] + i[1] } else { i[path] };
             let drop_v = match through > 0.0 {
                 _ if !parts.has_drop(path) => 0.0,
@@ -252,7 +252,8 @@ mod tests {
         ];
         // (own, mutual): a reservoir, a choke input without and with leakage, a doubler.
         let circuits = [(60.0, 20.0), (2.3e6, 2.3e6 - 80.0), (2.31e6, 2.29e6), (60.0, -40.0)];
-        let drives = [[300.0, -900.0], [-900.0, 300.0], [-5.0, -7.0], [60.0, 59.0], [4.3e5, 4.5e5], [4.4e5, 4.2e5]];
+        let drives =
+            [[300.0, -900.0], [-900.0, 300.0], [-5.0, -7.0], [60.0, 59.0], [4.3e5, 4.5e5], [4.4e5, 4.2e5]];
         for diode in diodes {
             for drop in drops {
                 for (own, mutual) in circuits {
@@ -266,7 +267,10 @@ mod tests {
                                 let small = 1e-8 * (drive[0].abs() + drive[1].abs());
                                 for path in [0, 1] {
                                     let holds = if i[path] > 0.0 { left[path].abs() } else { left[path] };
-                                    assert!(i[path] >= 0.0 && holds <= small, "{parts:?} {balance:?}: {i:?} leave {left:?}");
+                                    assert!(
+                                        i[path] >= 0.0 && holds <= small,
+                                        "{parts:?} {balance:?}: {i:?} leave {left:?}"
+                                    );
                                 }
                             }
                         }

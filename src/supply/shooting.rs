@@ -64,7 +64,8 @@ pub(super) fn shoot(
             last = None;
             continue;
         }
-        let r = DVector::from_iterator(here.len(), walk.end.iter().zip(&here).map(|(end, start)| end - start));
+        let r =
+            DVector::from_iterator(here.len(), walk.end.iter().zip(&here).map(|(end, start)| end - start));
         if let Some(taken) = &last {
             let again = taken.matrix.solve(&r).map_or(f64::INFINITY, |step| goal.size(&step));
             if again > (1.0 - taken.part / 4.0) * taken.size && again > goal.residual {
@@ -84,7 +85,8 @@ pub(super) fn shoot(
             continue;
         }
         let n = here.len();
-        let matrix = DMatrix::from_fn(n, n, |i, j| f64::from(u8::from(i == j)) - walk.tangent[i * n + j]).lu();
+        let matrix =
+            DMatrix::from_fn(n, n, |i, j| f64::from(u8::from(i == j)) - walk.tangent[i * n + j]).lu();
         let Some(step) = matrix.solve(&r) else {
             plain = PLAIN;
             here = walk.end;

@@ -65,7 +65,14 @@ impl Stage {
     }
 
     /// Solves the stage at the e.m.f. `emf` (of one half if centre-tapped) into `y`. `None` if no answer was found.
-    pub(super) fn solve(&mut self, net: &Network, emf: f64, a: f64, base: &[f64], y: &mut [f64]) -> Option<()> {
+    pub(super) fn solve(
+        &mut self,
+        net: &Network,
+        emf: f64,
+        a: f64,
+        base: &[f64],
+        y: &mut [f64],
+    ) -> Option<()> {
         self.a = a;
         for _ in 0..MOST_WALKS {
             self.linearise_loads(net);
@@ -87,7 +94,8 @@ impl Stage {
     fn linearise_loads(&mut self, net: &Network) {
         for (k, node) in net.nodes.iter().enumerate() {
             let v = self.v[k];
-            let (i, siemens) = if node.laws.is_empty() { (node.siemens * v, node.siemens) } else { node.drawn(v) };
+            let (i, siemens) =
+                if node.laws.is_empty() { (node.siemens * v, node.siemens) } else { node.drawn(v) };
             self.about_v[k] = v;
             self.drawn[k] = i;
             self.load_siemens[k] = siemens;
@@ -309,8 +317,7 @@ impl Stage {
                 }
                 if let Some(shunt) = node.shunt {
                     let base = row(d_base, shunt.state, c);
-                    d_y[shunt.state * m + c] =
-                        base + a / shunt.farad * self.shunt_siemens[k] * (v - base);
+                    d_y[shunt.state * m + c] = base + a / shunt.farad * self.shunt_siemens[k] * (v - base);
                 }
             }
         }

@@ -225,7 +225,8 @@ pub struct Solver<'a> {
     options: SolveOptions,
     net: Network,
     half: bool,
-    peaks: (f64, f64),
+    /// Peak of the mains over its r.m.s.
+    crest_factor: f64,
     earlier: Option<Warm>,
 }
 
@@ -247,7 +248,7 @@ impl<'a> Solver<'a> {
             options,
             net,
             half,
-            peaks: circuit.wave.peaks(),
+            crest_factor: circuit.wave.crest_factor(),
             earlier: None,
         })
     }
@@ -261,7 +262,8 @@ impl<'a> Solver<'a> {
             let what = format!("a mains of {mains_v} V is no mains");
             return Err(SolveError::Circuit { amplifier: self.circuit.amplifier.clone(), what });
         }
-        let emf_v = self.circuit.transformer.secondary_v.value * mains_v / self.circuit.transformer.wound_for_v;
+        let emf_v =
+            self.circuit.transformer.secondary_v.value * mains_v / self.circuit.transformer.wound_for_v;
         if self.net.draws_nothing || self.rest_v(emf_v) <= 0.0 {
             return Ok(self.at_rest(mains_v, emf_v));
         }
@@ -310,13 +312,8 @@ impl<'a> Solver<'a> {
         start: Vec<f64>,
         residual: f64,
     ) -> Result<Periodic, SolveError> {
-        let drive = Drive {
-            net: &self.net,
-            mesh,
-            emf_v,
-            period_s: 1.0 / self.circuit.frequency_hz,
-            half: self.half,
-        };
+        let drive =
+            Drive { net: &self.net, mesh, emf_v, period_s: 1.0 / self.circuit.frequency_hz, half: self.half };
         let scale = self.scale(emf_v);
         let goal = Goal {
             residual,
@@ -352,19 +349,15 @@ impl<'a> Solver<'a> {
     /// halves add up.
     fn rest_v(&self, emf_v: f64) -> f64 {
         let [upper, lower] = self.rest_pair(emf_v);
-        match self.net.wiring {
-            RectifierCircuit::Doubler => upper.max(0.0) + lower.max(0.0),
-            RectifierCircuit::HalfWave => upper,
-            RectifierCircuit::Bridge | RectifierCircuit::FullWave => upper.max(lower),
-        }
+        if self.net.pair.is_some() { upper.max(0.0) + lower.max(0.0) } else { upper }
     }
 
     /// What each half-wave alone would charge to, V.
     fn rest_pair(&self, emf_v: f64) -> [f64; 2] {
         let parts = &self.net.parts;
-        let devices = parts.devices * parts.diode.knee_v();
-        let upper_drop = if self.net.pair.is_some() { 0.0 } else { parts.drop.knee_v };
-        [emf_v * self.peaks.0 - devices - upper_drop, emf_v * self.peaks.1 - devices - parts.drop.knee_v]
+        let lower = emf_v * self.crest_factor - parts.devices * parts.diode.knee_v() - parts.drop.knee_v;
+        // In a doubler the dropper stands in the lower half alone.
+        [if self.net.pair.is_some() { lower + parts.drop.knee_v } else { lower }, lower]
     }
 
     fn first_rest_v(&self, emf_v: f64) -> f64 {
@@ -453,7 +446,7 @@ impl<'a> Solver<'a> {
             dropper: self.circuit.dropper.as_ref().map(|_| DropperState { mean_v: knee_v, loss_w: 0.0 }),
             heater_v: self.heater_v(mains_v),
             power: PowerBalance::default(),
-            crest_factor: self.peaks.0.max(self.peaks.1),
+            crest_factor: self.crest_factor,
             residual: 0.0,
             work: Work::default(),
             warm: None,
@@ -461,17 +454,15 @@ impl<'a> Solver<'a> {
     }
 
     fn inverse_at_rest(&self, emf_v: f64) -> f64 {
-        let (positive, negative) = (emf_v * self.peaks.0, emf_v * self.peaks.1);
-        let peak = positive.max(negative);
+        let peak_v = emf_v * self.crest_factor;
         let rest_v = self.rest_v(emf_v).max(0.0);
         // What a dropper below its knee takes while the winding's peak drives forwards.
-        let dropped = (peak - rest_v).clamp(0.0, self.net.parts.drop.knee_v);
-        let [upper, lower] = self.rest_pair(emf_v).map(|v| v.max(0.0));
+        let dropped = (peak_v - rest_v).clamp(0.0, self.net.parts.drop.knee_v);
         match self.net.wiring {
-            RectifierCircuit::Bridge => 0.5 * (rest_v + dropped + peak),
-            RectifierCircuit::FullWave => rest_v + dropped + peak,
-            RectifierCircuit::HalfWave => rest_v + negative,
-            RectifierCircuit::Doubler => (upper + negative).max(lower + positive),
+            RectifierCircuit::Bridge => 0.5 * (rest_v + dropped + peak_v),
+            RectifierCircuit::FullWave => rest_v + dropped + peak_v,
+            RectifierCircuit::HalfWave => rest_v + peak_v,
+            RectifierCircuit::Doubler => self.rest_pair(emf_v)[0].max(0.0) + peak_v,
         }
     }
 
@@ -523,7 +514,7 @@ impl<'a> Solver<'a> {
                 filter_w: seen.nodes.iter().map(|node| node.series_w + node.esr_w).sum(),
                 loads_w: seen.nodes.iter().map(|node| node.load_w).sum(),
             },
-            crest_factor: self.peaks.0.max(self.peaks.1),
+            crest_factor: self.crest_factor,
             residual: periodic.residual,
             work,
             warm: Some(warm),
@@ -550,9 +541,7 @@ impl<'a> Solver<'a> {
 
     fn dropper(&self, seen: &Measures) -> Option<DropperState> {
         let (loss_w, through_a, knee_v) = match self.circuit.dropper.as_ref()? {
-            Dropper::LineResistor(_) => {
-                (seen.nodes[1].line_dropper_w, seen.nodes[1].series_a, 0.0)
-            }
+            Dropper::LineResistor(_) => (seen.nodes[1].line_dropper_w, seen.nodes[1].series_a, 0.0),
             _ => (seen.return_drop_w, seen.return_a, self.net.parts.drop.knee_v),
         };
         let mean_v = if through_a > 0.0 { loss_w / through_a } else { knee_v };

@@ -1,8 +1,8 @@
 //! Circuits that this room's tests share.
 
 use super::{
-    Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, MainsWave, RectifierCircuit, Section, SeriesPart,
-    Transformer, Winding,
+    Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, MainsWave, RectifierCircuit, Section,
+    SeriesPart, Transformer, Winding,
 };
 
 /// A law of constant current.
@@ -53,7 +53,11 @@ pub(super) fn circuit(
         rectifier,
         device,
         doubler_f: doubler.then_some([2.0 * farad; 2]),
-        filter: vec![Section { node: "reservoir".to_owned(), series: SeriesPart::None, capacitor: reservoir }],
+        filter: vec![Section {
+            node: "reservoir".to_owned(),
+            series: SeriesPart::None,
+            capacitor: reservoir,
+        }],
         loads,
         dropper: None,
         heater: None,
@@ -94,8 +98,10 @@ pub(super) fn amplifier() -> Circuit {
 
 /// The amplifier in every wiring, with every device and every dropper.
 pub(super) fn all() -> Vec<(String, Circuit)> {
-    let devices =
-        [Device::Silicon { forward_v: 0.85, on_ohm: 0.05 }, Device::Valve { perveance: 3.2e-3, type_name: None }];
+    let devices = [
+        Device::Silicon { forward_v: 0.85, on_ohm: 0.05 },
+        Device::Valve { perveance: 3.2e-3, type_name: None },
+    ];
     let droppers = [
         None,
         Some(Dropper::ReturnMosfet { zener_v: 36.0, threshold_v: 3.5, k_a_per_v2: 1.0, half_width_v: 2.0 }),
