@@ -6,11 +6,14 @@
 mod circuit;
 mod curve;
 mod device;
+mod doubt;
 mod measures;
 mod mesh;
+mod monotone;
 mod network;
 mod paths;
 mod period;
+mod projection;
 #[cfg(test)]
 mod published;
 mod shooting;
@@ -24,7 +27,8 @@ pub use circuit::{
     Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, Loading, MainsWave, RectifierCircuit,
     Section, SeriesPart, Transformer, Winding,
 };
-pub use curve::{Measured, RailCurve};
+pub use curve::{Measured, RailCurve, SolvedCurve};
+pub use projection::Grid;
 pub use steady::{
     DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
     steady_state,

@@ -217,6 +217,20 @@ pub fn steady_state(
     Solver::new(circuit, loading, options.clone())?.at(mains_v)
 }
 
+/// Solves `circuit` under `loading` at each of `mains_v`, each solution starting the next.
+///
+/// # Errors
+/// As [`steady_state`], for the first mains that fails.
+pub fn sweep(
+    circuit: &Circuit,
+    loading: Loading,
+    mains_v: &[f64],
+    options: &SolveOptions,
+) -> Result<Vec<SteadyState>, SolveError> {
+    let mut solver = Solver::new(circuit, loading, options.clone())?;
+    mains_v.iter().map(|&mains_v| solver.at(mains_v)).collect()
+}
+
 /// One circuit under one loading, ready to be solved at any mains; each solution is the next one's start.
 #[derive(Clone, Debug)]
 pub struct Solver<'a> {
