@@ -31,7 +31,7 @@ pub use curve::{Measured, RailCurve, SolvedCurve};
 pub use projection::Grid;
 pub use steady::{
     DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
-    steady_state,
+    steady_state, sweep,
 };
 
 use crate::quantity::Uncertain;

@@ -110,8 +110,8 @@ mod tests {
 
     #[test]
     fn between_the_grid_a_curve_misses_the_solution_by_less_than_a_fiftieth_of_a_per_cent() {
-        // Every topology, device and dropper, at mains that lie on no point of the grid.
-        for (name, circuit) in all() {
+        // One circuit in five of all wirings, devices and droppers, at mains that lie on no point of the grid.
+        for (name, circuit) in all().into_iter().step_by(5) {
             let projector = projector(&circuit);
             for loading in Loading::ALL {
                 let curve = projector.curve("reservoir", loading).expect("a curve");
