@@ -1,5 +1,5 @@
-//! What one period showed: integrals by the method's own weights, so that charge is balanced exactly, and extremes at
-//! the ends of the steps.
+//! What one period showed: integrals by the method's own weights, so that charge is balanced exactly, and extremes:
+//! of the voltages at every stage, of the currents at the ends of the steps.
 
 use super::circuit::RectifierCircuit;
 use super::network::Network;
@@ -87,6 +87,10 @@ impl Measures {
                 sum.esr_w += weight * shunt.esr_ohm * stage.shunt_i[k].powi(2);
             }
         }
+        for (sum, &v) in self.nodes.iter_mut().zip(&stage.v) {
+            sum.lowest_v = sum.lowest_v.min(v);
+            sum.highest_v = sum.highest_v.max(v);
+        }
         let [positive, negative] = stage.paths.i;
         let winding = positive - negative;
         self.source_w += weight * emf * winding;
@@ -105,17 +109,31 @@ impl Measures {
         }
     }
 
-    /// Looks at the extremes at a step's end.
-    pub(super) fn look(&mut self, net: &Network, stage: &Stage, y: &[f64], emf: f64) {
-        for (sum, &v) in self.nodes.iter_mut().zip(&stage.v) {
-            sum.lowest_v = sum.lowest_v.min(v);
-            sum.highest_v = sum.highest_v.max(v);
-        }
+    /// Looks at the extremes of the currents and of the inverse voltage at a step's end.
+    /// The step took `seconds` and began with the states `before`.
+    pub(super) fn look(
+        &mut self,
+        net: &Network,
+        stage: &Stage,
+        y: &[f64],
+        emf: f64,
+        before: &[f64],
+        seconds: f64,
+    ) {
         let [positive, negative] = stage.paths.i;
         self.paths[0].peak_a = self.paths[0].peak_a.max(positive);
         self.paths[1].peak_a = self.paths[1].peak_a.max(negative);
         self.winding_peak_a = self.winding_peak_a.max((positive - negative).abs());
-        self.inverse_peak_v = self.inverse_peak_v.max(inverse_v(net, stage, y, emf));
+        // Over the whole step: where a current has just met its bound a stage's own slope is a fiction.
+        let leak_v = net.leak_state.map_or([0.0; 2], |at| {
+            let held = |state: usize| net.leakage_h * (y[state] - before[state]) / seconds;
+            if net.wiring == RectifierCircuit::FullWave {
+                [held(at), held(at + 1)]
+            } else {
+                [held(at), -held(at)]
+            }
+        });
+        self.inverse_peak_v = self.inverse_peak_v.max(inverse_v(net, stage, y, emf, leak_v));
     }
 }
 
@@ -125,39 +143,41 @@ fn return_current(net: &Network, positive: f64, negative: f64) -> f64 {
 }
 
 /// The greatest inverse voltage across any one device now, V. A dropper doesn't block in reverse; while the winding
-/// drives forwards but below the dropper's knee, the dropper takes what the device doesn't.
-fn inverse_v(net: &Network, stage: &Stage, y: &[f64], emf: f64) -> f64 {
+/// drives forwards but below the dropper's knee, the dropper takes what the device doesn't. `leak_v` is what the
+/// leakage of each path holds.
+fn inverse_v(net: &Network, stage: &Stage, y: &[f64], emf: f64, leak_v: [f64; 2]) -> f64 {
     let [positive, negative] = stage.paths.i;
-    let through = return_current(net, positive, negative);
-    let drop = &net.parts.drop;
     let across = |i: f64| net.parts.diode.volts(i).0;
+    let dropped = net.parts.drop.volts(return_current(net, positive, negative)).0;
     if let Some(pair) = net.pair {
         let [upper, lower] = [y[pair.state], y[pair.state + 1]];
         return match (positive > 0.0, negative > 0.0) {
             (false, false) => (upper - emf).max(lower + emf),
             (true, false) => upper + lower + across(positive),
-            (false, true) => upper + lower + across(negative) + drop.volts(through).0,
+            (false, true) => upper + lower + across(negative) + dropped,
             (true, true) => 0.0,
         };
     }
-    // With no current a choke holds no voltage, so the output stands at its node.
-    let output = if positive + negative > 0.0 { stage.output_v } else { stage.v[0] };
-    let dropped =
-        if through > 0.0 { drop.volts(through).0 } else { (emf.abs() - output).clamp(0.0, drop.knee_v) };
-    let raised = output + dropped;
-    match net.wiring {
-        RectifierCircuit::Bridge => match (positive > 0.0, negative > 0.0) {
-            (false, false) => 0.5 * (raised + emf.abs()),
-            (true, false) => raised + across(positive),
-            (false, true) => raised + across(negative),
-            (true, true) => 0.0,
-        },
-        RectifierCircuit::FullWave => {
-            let at_negative = if negative > 0.0 { 0.0 } else { raised + emf };
-            let at_positive = if positive > 0.0 { 0.0 } else { raised - emf };
-            at_negative.max(at_positive)
+    // What the winding's terminals hold in the direction of the path that conducts.
+    let terminals = match (positive > 0.0, negative > 0.0) {
+        (true, true) => return 0.0,
+        (true, false) => emf - net.source_ohm * positive - leak_v[0],
+        (false, true) => -emf - net.source_ohm * negative - leak_v[1],
+        (false, false) => {
+            // With no current a choke holds no voltage, so the rectifier's output stands at its node.
+            let output = stage.v[0];
+            let forwards = (emf.abs() - output).clamp(0.0, net.parts.drop.knee_v);
+            return match net.wiring {
+                RectifierCircuit::Bridge => 0.5 * (output + forwards + emf.abs()),
+                RectifierCircuit::FullWave => output + forwards + emf.abs(),
+                RectifierCircuit::HalfWave | RectifierCircuit::Doubler => output - emf,
+            };
         }
-        RectifierCircuit::HalfWave if positive == 0.0 => output - emf,
+    };
+    let device_v = across(positive.max(negative));
+    match net.wiring {
+        RectifierCircuit::Bridge => terminals - device_v,
+        RectifierCircuit::FullWave => terminals - device_v + emf.abs(),
         RectifierCircuit::HalfWave | RectifierCircuit::Doubler => 0.0,
     }
 }

@@ -10,8 +10,9 @@ pub(super) const ALPHA: f64 = 1.0 - SQRT_2 / 2.0;
 /// A part of the period in which a diode conducts, in fractions of the period from the fundamental's rise.
 pub(super) type Window = (f64, f64);
 
-/// What part of the steps goes to the windows.
-const SHARE_IN_WINDOWS: f64 = 0.65;
+/// What part of the steps goes to the windows in which a diode conducts, and to those in which both paths do: the
+/// former carry all the charge, the latter are short and rarely decide anything.
+const SHARES: [f64; 2] = [0.65, 0.25];
 
 /// Windows wider than this part of the mesh need no finer steps than the rest.
 const WIDE: f64 = 0.6;
@@ -39,25 +40,37 @@ impl Mesh {
         Mesh::of(wave, &[(0.0, span, steps)])
     }
 
-    /// About `steps` steps over `span`, most of them in the `windows` (in order, from 0 to `span`).
-    pub(super) fn refined(wave: &MainsWave, span: f64, steps: usize, windows: &[Window]) -> Mesh {
-        let windows = widened(windows, span);
-        let inside = windows.iter().map(|(from, to)| to - from).sum::<f64>();
-        if windows.is_empty() || inside > WIDE * span {
+    /// About `steps` steps over `span`, most of them where a diode `conducts`; where that is nearly always, as behind a
+    /// choke, in the `overlaps` in which both paths do. (Windows in order, from 0 to `span`.)
+    pub(super) fn refined(
+        wave: &MainsWave,
+        span: f64,
+        steps: usize,
+        conducts: &[Window],
+        overlaps: &[Window],
+    ) -> Mesh {
+        let length = |windows: &[Window]| windows.iter().map(|(from, to)| to - from).sum::<f64>();
+        let Some((windows, share)) = [conducts, overlaps]
+            .map(|windows| widened(windows, span))
+            .into_iter()
+            .zip(SHARES)
+            .find(|(windows, _)| !windows.is_empty() && length(windows) <= WIDE * span)
+        else {
             return Mesh::even(wave, span, steps);
-        }
+        };
+        let inside = length(&windows);
         let count =
             |length: f64, of: f64, share: f64| ((steps as f64 * share * length / of).ceil() as usize).max(4);
         let mut pieces = Vec::with_capacity(2 * windows.len() + 1);
         let mut at = 0.0;
         let gap = |pieces: &mut Vec<_>, from: f64, to: f64| {
             if to - from > 1e-9 {
-                pieces.push((from, to, count(to - from, span - inside, 1.0 - SHARE_IN_WINDOWS)));
+                pieces.push((from, to, count(to - from, span - inside, 1.0 - share)));
             }
         };
         for &(from, to) in &windows {
             gap(&mut pieces, at, from);
-            pieces.push((from, to, count(to - from, inside, SHARE_IN_WINDOWS)));
+            pieces.push((from, to, count(to - from, inside, share)));
             at = to;
         }
         gap(&mut pieces, at, span);
@@ -99,7 +112,7 @@ mod tests {
     #[test]
     fn the_steps_fill_the_span_without_a_gap_and_are_finest_in_the_windows() {
         let windows = [(0.19, 0.26), (0.7, 0.76)];
-        let mesh = Mesh::refined(&MainsWave::default(), 1.0, 100, &windows);
+        let mesh = Mesh::refined(&MainsWave::default(), 1.0, 100, &windows, &[]);
         let mut at = 0.0;
         for step in &mesh.steps {
             assert!((step.start - at).abs() < 1e-12);

@@ -187,6 +187,24 @@ impl Network {
             draws_nothing,
         })
     }
+
+    /// Takes a state to the nearest one that can be: a first choke carries what the rectifier gives and never less
+    /// than nothing, and a winding no more than that choke.
+    pub(super) fn keep_possible(&self, state: &mut [f64]) {
+        let mut most = f64::INFINITY;
+        if let Some(choke) = self.nodes[0].choke {
+            state[choke.state] = state[choke.state].max(0.0);
+            most = state[choke.state];
+        }
+        match (self.leak_state, self.wiring) {
+            (None, _) => {}
+            (Some(at), RectifierCircuit::FullWave) => {
+                state[at..at + 2].iter_mut().for_each(|half| *half = half.clamp(0.0, most));
+            }
+            (Some(at), RectifierCircuit::HalfWave) => state[at] = state[at].clamp(0.0, most),
+            (Some(at), _) => state[at] = state[at].clamp(-most, most),
+        }
+    }
 }
 
 fn add_loads(circuit: &Circuit, loading: Loading, nodes: &mut [Node]) -> Result<(), String> {

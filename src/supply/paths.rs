@@ -194,7 +194,8 @@ impl PathParts {
                 high = i;
             }
             let step = left / slope;
-            if step.is_finite() && step.abs() <= 1e-12 * (i + currents[0]) || high - low <= 1e-15 * high {
+            let settled = step.is_finite() && step.abs() <= 1e-12 * (i + currents[0]);
+            if settled || high.is_finite() && high - low <= 1e-15 * high {
                 return Some(found);
             }
             let newton = i + step;
@@ -207,5 +208,75 @@ impl PathParts {
             };
         }
         None
+    }
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    fn parts(diode: DiodeLaw, drop: ReturnDrop) -> PathParts {
+        PathParts { diode, devices: 2.0, drop, drop_in: DropIn::Shared }
+    }
+
+    /// What is left of each path's balance: zero where it conducts, never above zero where it does not.
+    fn left(parts: &PathParts, balance: &Balance, i: [f64; 2]) -> [f64; 2] {
+        [0, 1].map(|path| {
+            let other = 1 - path;
+            let device_v = if i[path] > 0.0 { parts.diode.volts(i[path]).0 } else { parts.diode.knee_v() };
+            let through = if parts.drop_in == DropIn::Shared { i[0] + i[1] } else { i[path] };
+            let drop_v = match through > 0.0 {
+                _ if !parts.has_drop(path) => 0.0,
+                true => parts.drop.volts(through).0,
+                false => parts.drop.knee_v,
+            };
+            balance.drive[path]
+                - balance.own_ohm[path] * i[path]
+                - balance.mutual_ohm * i[other]
+                - parts.devices * device_v
+                - drop_v
+        })
+    }
+
+    #[test]
+    fn every_answer_balances_whatever_the_parts() {
+        let diodes = [
+            DiodeLaw::Straight { offset_v: 0.0, ohm: 0.0 },
+            DiodeLaw::Straight { offset_v: 0.85, ohm: 0.05 },
+            DiodeLaw::SpaceCharge { perveance: 8.4e-4 },
+        ];
+        let drops = [
+            ReturnDrop::default(),
+            ReturnDrop { knee_v: 40.0, ohm: 2.0, root: 0.0 },
+            ReturnDrop { knee_v: 38.0, ohm: 0.0, root: 1.5 },
+        ];
+        // (own, mutual): a reservoir, a choke input without and with leakage, a doubler.
+        let circuits = [(60.0, 20.0), (2.3e6, 2.3e6 - 80.0), (2.31e6, 2.29e6), (60.0, -40.0)];
+        let drives =
+            [[300.0, -900.0], [-900.0, 300.0], [-5.0, -7.0], [60.0, 59.0], [4.3e5, 4.5e5], [4.4e5, 4.2e5]];
+        for diode in diodes {
+            for drop in drops {
+                for (own, mutual) in circuits {
+                    for drive in drives {
+                        for drop_in in [DropIn::Shared, DropIn::Negative] {
+                            let parts = PathParts { drop_in, ..parts(diode, drop) };
+                            let balance = Balance { drive, own_ohm: [own; 2], mutual_ohm: mutual };
+                            for guess in [[0.0, 0.0], [0.19, 5e-5], [3.0, 3.0]] {
+                                let i = parts.solve(&balance, guess).expect("an answer").i;
+                                let left = left(&parts, &balance, i);
+                                let small = 1e-8 * (drive[0].abs() + drive[1].abs());
+                                for path in [0, 1] {
+                                    let holds = if i[path] > 0.0 { left[path].abs() } else { left[path] };
+                                    assert!(
+                                        i[path] >= 0.0 && holds <= small,
+                                        "{parts:?} {balance:?}: {i:?} leave {left:?}"
+                                    );
+                                }
+                            }
+                        }
+                    }
+                }
+            }
+        }
     }
 }

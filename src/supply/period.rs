@@ -36,7 +36,10 @@ pub(super) struct Walk {
     /// ∂end/∂start by rows.
     pub(super) tangent: Vec<f64>,
     pub(super) measures: Measures,
-    pub(super) windows: Vec<Window>,
+    /// Where a diode conducts.
+    pub(super) conducts: Vec<Window>,
+    /// Where both paths do, as while the current changes over from one to the other.
+    pub(super) overlaps: Vec<Window>,
 }
 
 /// Room for the walk's stages and tangents.
@@ -45,6 +48,7 @@ pub(super) struct Walker {
     stage: Stage,
     first: Vec<f64>,
     base: Vec<f64>,
+    before: Vec<f64>,
     d_first: Vec<f64>,
     d_base: Vec<f64>,
 }
@@ -56,6 +60,7 @@ impl Walker {
             stage: Stage::new(net, volts),
             first: vec![0.0; m],
             base: vec![0.0; m],
+            before: vec![0.0; m],
             d_first: vec![0.0; mm],
             d_base: vec![0.0; mm],
         }
@@ -73,7 +78,7 @@ impl Walker {
             tangent[i * m + i] = 1.0;
         }
         let mut measures = Measures::new(net);
-        let mut windows = Windows::default();
+        let (mut conducts, mut overlaps) = (Windows::default(), Windows::default());
         let span = if drive.half { 0.5 } else { 1.0 };
         for step in &drive.mesh.steps {
             let a = ALPHA * step.length * drive.period_s;
@@ -84,7 +89,7 @@ impl Walker {
             self.stage.solve(net, emf[0], a, &y, &mut self.first).ok_or(stuck)?;
             self.stage.carry(net, &tangent, &mut self.d_first);
             measures.add(net, &self.stage, emf[0], weight * (1.0 - ALPHA));
-            let mut conducts = self.stage.conducts();
+            let first = self.stage.conducting();
 
             for ((base, &first), &y) in self.base.iter_mut().zip(&self.first).zip(&y) {
                 *base = y + FORWARD * (first - y);
@@ -92,18 +97,20 @@ impl Walker {
             for ((base, &first), &d) in self.d_base.iter_mut().zip(&self.d_first).zip(&tangent) {
                 *base = d + FORWARD * (first - d);
             }
+            self.before.copy_from_slice(&y);
             self.stage.solve(net, emf[1], a, &self.base, &mut y).ok_or(stuck)?;
             self.stage.carry(net, &self.d_base, &mut tangent);
             measures.add(net, &self.stage, emf[1], weight * ALPHA);
-            measures.look(net, &self.stage, &y, emf[1]);
-            conducts |= self.stage.conducts();
-            windows.note(conducts, step.start, step.length);
+            measures.look(net, &self.stage, &y, emf[1], &self.before, step.length * drive.period_s);
+            let paths = first.max(self.stage.conducting());
+            conducts.note(paths > 0, step.start, step.length);
+            overlaps.note(paths > 1, step.start, step.length);
         }
         if drive.half {
             exchange_halves(net, &mut y, 1);
             exchange_halves(net, &mut tangent, m);
         }
-        Ok(Walk { end: y, tangent, measures, windows: windows.all })
+        Ok(Walk { end: y, tangent, measures, conducts: conducts.all, overlaps: overlaps.all })
     }
 }
 
@@ -124,7 +131,7 @@ fn exchange_halves(net: &Network, rows: &mut [f64], columns: usize) {
     }
 }
 
-/// Collects the parts of the period in which a diode conducts.
+/// Collects the parts of the period in which something holds.
 #[derive(Default)]
 struct Windows {
     all: Vec<Window>,
@@ -132,12 +139,12 @@ struct Windows {
 }
 
 impl Windows {
-    fn note(&mut self, conducts: bool, start: f64, length: f64) {
-        match (conducts, self.open, self.all.last_mut()) {
+    fn note(&mut self, holds: bool, start: f64, length: f64) {
+        match (holds, self.open, self.all.last_mut()) {
             (true, true, Some(last)) => last.1 = start + length,
             (true, ..) => self.all.push((start, start + length)),
             (false, ..) => {}
         }
-        self.open = conducts;
+        self.open = holds;
     }
 }

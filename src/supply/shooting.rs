@@ -5,6 +5,7 @@
 
 use nalgebra::{DMatrix, DVector, Dyn, LU};
 
+use super::network::Network;
 use super::period::{Drive, Stuck, Walk, Walker};
 
 /// What the search must reach, and how long it may try.
@@ -58,7 +59,7 @@ pub(super) fn shoot(
     let mut residual = f64::INFINITY;
     for tries in 1..=goal.tries {
         let walk = walker.walk(drive, &here).map_err(NoPeriod::Stuck)?;
-        if walk.windows.is_empty() {
+        if walk.conducts.is_empty() {
             // Above every peak nothing says how far: a constant current would take it down for ever.
             lower(&mut here, goal);
             last = None;
@@ -71,7 +72,7 @@ pub(super) fn shoot(
             if again > (1.0 - taken.part / 4.0) * taken.size && again > goal.residual {
                 let part = taken.part / 2.0;
                 if part >= SHORTEST {
-                    here = moved(&taken.from, &taken.step, part);
+                    here = moved(drive.net, &taken.from, &taken.step, part);
                     last = last.map(|taken| Taken { part, ..taken });
                     continue;
                 }
@@ -95,7 +96,7 @@ pub(super) fn shoot(
         };
         let size = goal.size(&step);
         residual = size;
-        let state = moved(&here, &step, 1.0);
+        let state = moved(drive.net, &here, &step, 1.0);
         if size <= goal.residual {
             return Ok(Periodic { state, walk, residual, tries });
         }
@@ -121,8 +122,12 @@ impl Goal<'_> {
     }
 }
 
-fn moved(from: &[f64], step: &DVector<f64>, part: f64) -> Vec<f64> {
-    from.iter().zip(step.iter()).map(|(x, step)| x + part * step).collect()
+/// Along the step, but not to where a rectifier would carry current backwards: there the circuit is not the one that
+/// the step was computed for, and Newton's method can go to and fro for ever.
+fn moved(net: &Network, from: &[f64], step: &DVector<f64>, part: f64) -> Vec<f64> {
+    let mut to: Vec<f64> = from.iter().zip(step.iter()).map(|(x, step)| x + part * step).collect();
+    net.keep_possible(&mut to);
+    to
 }
 
 fn lower(state: &mut [f64], goal: &Goal<'_>) {

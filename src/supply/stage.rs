@@ -28,8 +28,6 @@ pub(super) struct Stage {
     pub(super) drawn: Vec<f64>,
     /// The paths' currents.
     pub(super) paths: PathCurrents,
-    /// Between the rectifier's output and 0 V, V (of no meaning in a doubler).
-    pub(super) output_v: f64,
     a: f64,
     shunt_siemens: Vec<f64>,
     about_v: Vec<f64>,
@@ -41,7 +39,6 @@ pub(super) struct Stage {
     series_v: Vec<f64>,
     tangent_node: Vec<f64>,
     tangent_series: Vec<f64>,
-    tangent_v: Vec<f64>,
 }
 
 impl Stage {
@@ -63,7 +60,6 @@ impl Stage {
             series_v: zeros,
             tangent_node: columns.clone(),
             tangent_series: columns.clone(),
-            tangent_v: vec![0.0; net.states],
             ..Stage::default()
         }
     }
@@ -90,9 +86,9 @@ impl Stage {
         None
     }
 
-    /// Whether a diode conducts.
-    pub(super) fn conducts(&self) -> bool {
-        self.paths.i[0] > 0.0 || self.paths.i[1] > 0.0
+    /// How many paths conduct.
+    pub(super) fn conducting(&self) -> usize {
+        self.paths.i.iter().filter(|i| **i > 0.0).count()
     }
 
     fn linearise_loads(&mut self, net: &Network) {
@@ -223,7 +219,6 @@ impl Stage {
                 (0, Some(pair)) => self.unfold_pair(net, pair.state, base, y),
                 (0, None) => {
                     let i = positive + negative;
-                    self.output_v = self.series_v[0] + i / self.series_siemens[0];
                     (i, (i - self.node_source[0]) * self.node_ohm[0])
                 }
                 _ => {

@@ -1,6 +1,6 @@
 //! The supply's periodic steady state at one mains voltage and loading, and the solver that finds it.
 
-use super::circuit::{Circuit, Dropper, Loading, RectifierCircuit, SeriesPart};
+use super::circuit::{Circuit, Dropper, Loading, RectifierCircuit};
 use super::measures::{Measures, PathMeasure};
 use super::mesh::{Mesh, Window};
 use super::network::Network;
@@ -32,7 +32,20 @@ impl Default for SolveOptions {
 pub struct Warm {
     mains_v: f64,
     state: Vec<f64>,
-    windows: Vec<Window>,
+    conducts: Vec<Window>,
+    overlaps: Vec<Window>,
+}
+
+impl Warm {
+    fn new(mains_v: f64, periodic: &Periodic) -> Warm {
+        let Periodic { state, walk, .. } = periodic;
+        Warm {
+            mains_v,
+            state: state.clone(),
+            conducts: walk.conducts.clone(),
+            overlaps: walk.overlaps.clone(),
+        }
+    }
 }
 
 /// Why a supply has no answer.
@@ -204,6 +217,20 @@ pub fn steady_state(
     Solver::new(circuit, loading, options.clone())?.at(mains_v)
 }
 
+/// Solves `circuit` under `loading` at each of `mains_v`, each solution starting the next.
+///
+/// # Errors
+/// As [`steady_state`], for the first mains that fails.
+pub fn sweep(
+    circuit: &Circuit,
+    loading: Loading,
+    mains_v: &[f64],
+    options: &SolveOptions,
+) -> Result<Vec<SteadyState>, SolveError> {
+    let mut solver = Solver::new(circuit, loading, options.clone())?;
+    mains_v.iter().map(|&mains_v| solver.at(mains_v)).collect()
+}
+
 /// One circuit under one loading, ready to be solved at any mains; each solution is the next one's start.
 #[derive(Clone, Debug)]
 pub struct Solver<'a> {
@@ -212,7 +239,8 @@ pub struct Solver<'a> {
     options: SolveOptions,
     net: Network,
     half: bool,
-    peaks: (f64, f64),
+    /// Peak of the mains over its r.m.s.
+    crest_factor: f64,
     earlier: Option<Warm>,
 }
 
@@ -228,7 +256,15 @@ impl<'a> Solver<'a> {
             return Err(refuse(format!("{} steps in half a period are too few, 8 at least", options.steps)));
         }
         let half = net.symmetric && circuit.wave.is_half_wave_symmetric();
-        Ok(Solver { circuit, loading, options, net, half, peaks: circuit.wave.peaks(), earlier: None })
+        Ok(Solver {
+            circuit,
+            loading,
+            options,
+            net,
+            half,
+            crest_factor: circuit.wave.crest_factor(),
+            earlier: None,
+        })
     }
 
     /// The steady state at `mains_v` r.m.s.
@@ -254,7 +290,7 @@ impl<'a> Solver<'a> {
             },
             None => self.solve_cold(mains_v, emf_v)?,
         };
-        let warm = Warm { mains_v, state: periodic.state.clone(), windows: periodic.walk.windows.clone() };
+        let warm = Warm::new(mains_v, &periodic);
         self.earlier = self.options.warm.replace(warm.clone());
         Ok(self.describe(mains_v, &periodic, Work { walks, steps }, warm))
     }
@@ -263,7 +299,7 @@ impl<'a> Solver<'a> {
         let mesh = self.even_mesh();
         let start = self.cold_start(emf_v);
         let rough = self.shoot(mains_v, emf_v, &mesh, start, self.options.residual.max(1e-4))?;
-        let warm = Warm { mains_v, state: rough.state, windows: rough.walk.windows };
+        let warm = Warm::new(mains_v, &rough);
         let (fine, walks, steps) = self.solve_from(mains_v, emf_v, &warm)?;
         Ok((fine, rough.tries + walks, steps))
     }
@@ -275,7 +311,7 @@ impl<'a> Solver<'a> {
         warm: &Warm,
     ) -> Result<(Periodic, usize, usize), SolveError> {
         let wave = &self.circuit.wave;
-        let mesh = Mesh::refined(wave, self.span(), self.steps(), &warm.windows);
+        let mesh = Mesh::refined(wave, self.span(), self.steps(), &warm.conducts, &warm.overlaps);
         let start = warm.state.iter().map(|x| x * mains_v / warm.mains_v).collect();
         let found = self.shoot(mains_v, emf_v, &mesh, start, self.options.residual)?;
         let tries = found.tries;
@@ -327,19 +363,15 @@ impl<'a> Solver<'a> {
     /// halves add up.
     fn rest_v(&self, emf_v: f64) -> f64 {
         let [upper, lower] = self.rest_pair(emf_v);
-        match self.net.wiring {
-            RectifierCircuit::Doubler => upper.max(0.0) + lower.max(0.0),
-            RectifierCircuit::HalfWave => upper,
-            RectifierCircuit::Bridge | RectifierCircuit::FullWave => upper.max(lower),
-        }
+        if self.net.pair.is_some() { upper.max(0.0) + lower.max(0.0) } else { upper }
     }
 
     /// What each half-wave alone would charge to, V.
     fn rest_pair(&self, emf_v: f64) -> [f64; 2] {
         let parts = &self.net.parts;
-        let devices = parts.devices * parts.diode.knee_v();
-        let upper_drop = if self.net.pair.is_some() { 0.0 } else { parts.drop.knee_v };
-        [emf_v * self.peaks.0 - devices - upper_drop, emf_v * self.peaks.1 - devices - parts.drop.knee_v]
+        let lower = emf_v * self.crest_factor - parts.devices * parts.diode.knee_v() - parts.drop.knee_v;
+        // In a doubler the dropper stands in the lower half alone.
+        [if self.net.pair.is_some() { lower + parts.drop.knee_v } else { lower }, lower]
     }
 
     fn first_rest_v(&self, emf_v: f64) -> f64 {
@@ -428,7 +460,7 @@ impl<'a> Solver<'a> {
             dropper: self.circuit.dropper.as_ref().map(|_| DropperState { mean_v: knee_v, loss_w: 0.0 }),
             heater_v: self.heater_v(mains_v),
             power: PowerBalance::default(),
-            crest_factor: self.peaks.0.max(self.peaks.1),
+            crest_factor: self.crest_factor,
             residual: 0.0,
             work: Work::default(),
             warm: None,
@@ -436,17 +468,15 @@ impl<'a> Solver<'a> {
     }
 
     fn inverse_at_rest(&self, emf_v: f64) -> f64 {
-        let (positive, negative) = (emf_v * self.peaks.0, emf_v * self.peaks.1);
-        let peak = positive.max(negative);
+        let peak_v = emf_v * self.crest_factor;
         let rest_v = self.rest_v(emf_v).max(0.0);
         // What a dropper below its knee takes while the winding's peak drives forwards.
-        let dropped = (peak - rest_v).clamp(0.0, self.net.parts.drop.knee_v);
-        let [upper, lower] = self.rest_pair(emf_v).map(|v| v.max(0.0));
+        let dropped = (peak_v - rest_v).clamp(0.0, self.net.parts.drop.knee_v);
         match self.net.wiring {
-            RectifierCircuit::Bridge => 0.5 * (rest_v + dropped + peak),
-            RectifierCircuit::FullWave => rest_v + dropped + peak,
-            RectifierCircuit::HalfWave => rest_v + negative,
-            RectifierCircuit::Doubler => (upper + negative).max(lower + positive),
+            RectifierCircuit::Bridge => 0.5 * (rest_v + dropped + peak_v),
+            RectifierCircuit::FullWave => rest_v + dropped + peak_v,
+            RectifierCircuit::HalfWave => rest_v + peak_v,
+            RectifierCircuit::Doubler => self.rest_pair(emf_v)[0].max(0.0) + peak_v,
         }
     }
 
@@ -498,7 +528,7 @@ impl<'a> Solver<'a> {
                 filter_w: seen.nodes.iter().map(|node| node.series_w + node.esr_w).sum(),
                 loads_w: seen.nodes.iter().map(|node| node.load_w).sum(),
             },
-            crest_factor: self.peaks.0.max(self.peaks.1),
+            crest_factor: self.crest_factor,
             residual: periodic.residual,
             work,
             warm: Some(warm),
@@ -531,9 +561,4 @@ impl<'a> Solver<'a> {
         let mean_v = if through_a > 0.0 { loss_w / through_a } else { knee_v };
         Some(DropperState { mean_v, loss_w })
     }
-}
-
-/// Whether the filter begins with a choke, so that the rail is the mean of the rectified wave and not its peak.
-pub(super) fn is_choke_input(circuit: &Circuit) -> bool {
-    matches!(circuit.filter.first().map(|section| section.series), Some(SeriesPart::Choke { .. }))
 }
