@@ -5,7 +5,7 @@ use std::f64::consts::TAU;
 
 use serde::Serialize;
 
-use super::circuit::{Circuit, Load, Loading, RectifierCircuit, SeriesPart};
+use super::circuit::{Circuit, Loading, RectifierCircuit, SeriesPart};
 use super::discharge::{Discharge, discharge, drains};
 use super::steady::SteadyState;
 
@@ -344,12 +344,8 @@ fn discharge_findings(circuit: &Circuit, from_v: &[f64], standby_after: Option<u
 /// The highest that a node without any load can stand at, V.
 fn unloaded_peak_v(circuit: &Circuit, mains_v: f64) -> f64 {
     let emf_v = circuit.transformer.secondary_v.value * mains_v / circuit.transformer.wound_for_v;
-    let (positive, negative) = circuit.wave.peaks();
-    match circuit.rectifier {
-        RectifierCircuit::Doubler => emf_v * (positive + negative),
-        RectifierCircuit::HalfWave => emf_v * positive,
-        RectifierCircuit::Bridge | RectifierCircuit::FullWave => emf_v * positive.max(negative),
-    }
+    let peak_v = emf_v * circuit.wave.crest_factor();
+    if circuit.rectifier == RectifierCircuit::Doubler { 2.0 * peak_v } else { peak_v }
 }
 
 /// A full-wave choke input by its critical current: below I = V/(3ωL) (the rule R = 3ωL; handbook of choke-input
@@ -373,16 +369,10 @@ fn choke_finding(circuit: &Circuit, mains_v: f64) -> Option<Finding> {
     })
 }
 
-/// Whether a loading's currents are all known.
-pub fn is_known(circuit: &Circuit, loading: Loading) -> bool {
-    loading != Loading::Full
-        || circuit.loads.iter().all(|load| !matches!(load, Load::Law { full_a: None, .. }))
-}
-
 #[cfg(test)]
 pub(super) mod tests {
     use super::super::circuit::{
-        Capacitor, Device, Doubtful, Heater, MainsWave, Section, Transformer, Winding,
+        Capacitor, Device, Doubtful, Heater, Load, MainsWave, Section, Transformer, Winding,
     };
     use super::*;
 

@@ -33,7 +33,7 @@ pub use circuit::{
 pub use curve::{Measured, RailCurve, SolvedCurve};
 pub use discharge::{Discharge, SAFE_V, discharge};
 pub use findings::{
-    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, is_known, rectifier_findings, soft_source,
+    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
 };
 pub use projection::Grid;
 pub use steady::{

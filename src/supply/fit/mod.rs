@@ -12,6 +12,7 @@
 
 mod least_squares;
 mod pairs;
+mod projection;
 mod sort;
 mod surface;
 
@@ -32,7 +33,7 @@ const FEWEST_PAIRS: usize = 20;
 
 /// Half-width of a stated idle current as a fraction: valves drift, and the rail moves while one reads (common
 /// practice, no source).
-const IDLE_CURRENT_DOUBT: f64 = 0.10;
+const IDLE_CURRENT_DOUBT: f64 = 0.05;
 
 /// The record has told the second parameter if it has shrunk its doubt to this part of the prior's.
 const TOLD: f64 = 0.6;
@@ -265,7 +266,7 @@ pub fn fit(
     let index = circuit
         .node(node)
         .ok_or_else(|| FitError::NoNode { amplifier: amplifier(), node: node.to_owned() })?;
-    if word == Some(Loading::Full) && !super::findings::is_known(circuit, Loading::Full) {
+    if word == Some(Loading::Full) && !circuit.knows(Loading::Full) {
         return Err(FitError::FullUnknown { amplifier: amplifier() });
     }
     let second = weaker(circuit, index, pairs)?;

@@ -7,7 +7,6 @@
 
 use super::{Pair, Second};
 use crate::supply::circuit::{Circuit, Loading};
-use crate::supply::findings::is_known;
 use crate::supply::steady::{SolveError, SolveOptions, Solver};
 
 /// Points along the mains and along the parameter.
@@ -56,7 +55,7 @@ impl Surfaces {
         let reach = SECOND_REACH * second_u;
         let second_axis = Axis::new((1.0 - reach).max(0.2), 1.0 + reach, SECOND_POINTS);
         let mut rails = Vec::new();
-        for loading in Loading::ALL.into_iter().filter(|l| is_known(circuit, *l)) {
+        for loading in Loading::ALL.into_iter().filter(|l| circuit.knows(*l)) {
             let mut values = Vec::with_capacity(MAINS_POINTS * SECOND_POINTS);
             for factor in &second_axis.points {
                 let changed = second.applied(circuit, *factor);
