@@ -5,7 +5,8 @@
 //!     r = (1 + g_r)·(1 + c·z)·f(m/(1 + g_m)·(1 + s), 1 + p),   z = (m − m₀)/m₁
 //!
 //! s, p: secondary and second parameter, relative to their nameplates; g_m, g_r: gain errors of the two channels; c:
-//! how much the mains' crest (which the rail follows) moves from one end of the recorded mains to the other. Each has
+//! how much the mains' crest (which the rail follows) moves from one end of the recorded mains to the other. At idle
+//! a sixth is added to the model: what quiet music, seen only on one side, leaves of itself in a robust mean. Each has
 //! a normal prior of its standard uncertainty about nothing. The covariance is the inverse of the normal matrix
 //! (JCGM 100 C.3.5), residuals' correlation allowed for by the number of independent pairs.
 
@@ -17,7 +18,7 @@ use super::sort::Doing;
 use super::surface::Surfaces;
 use crate::supply::circuit::Loading;
 
-const N: usize = 5;
+const N: usize = 6;
 type Vector = SVector<f64, N>;
 type Matrix = SMatrix<f64, N, N>;
 
@@ -30,15 +31,19 @@ pub(super) const CREST_HALF_WIDTH: f64 = 0.01;
 const TUKEY: f64 = 4.685;
 const TUKEY_EFFICIENCY: f64 = 0.95;
 
+/// Huber's constant for 95 % efficiency.
+const HUBER: f64 = 1.345;
+
+/// Bias of a robust mean by outliers that all lie on one side and too close to be told, as a part of the spread: for a
+/// biweight and a share of 5 to 10 % of them (from memory, of the order of the maximum bias of such estimators).
+const ONE_SIDED: f64 = 0.2;
+
 /// Resolution of a logger: a spread below it is none, V.
 const LEAST_SCATTER_V: f64 = 0.02;
 
 /// Steps; the problem is nearly linear, and four are enough.
 const STEPS: usize = 30;
 const SETTLED: f64 = 1e-9;
-
-/// The longest that residuals are believed to remember, as the correlation of neighbours.
-const MOST_CORRELATED: f64 = 0.995;
 
 /// Standard uncertainties of the parameters before the record is looked at, all relative.
 #[derive(Clone, Copy, Debug)]
@@ -53,7 +58,7 @@ pub(super) struct Priors {
 impl Priors {
     fn array(&self) -> [f64; N] {
         // A prior without any doubt is one that the record can't move; its weight must stay finite.
-        [self.secondary, self.second, self.mains_gain, self.rail_gain, self.crest].map(|u| u.max(1e-6))
+        [self.secondary, self.second, self.mains_gain, self.rail_gain, self.crest, 1.0].map(|u| u.max(1e-6))
     }
 
     /// How far a level of the rail lies from its projection, in standard uncertainties.
@@ -97,13 +102,32 @@ impl<'a> Data<'a> {
         self.points.len()
     }
 
+    /// Median of recorded over projected rail by the nameplate, and its standard uncertainty by the priors.
+    pub(super) fn level(&self, priors: &Priors) -> (f64, f64) {
+        let mut ratios = Vec::new();
+        let mut widest: f64 = 0.0;
+        for (pair, loading) in &self.points {
+            let rail_v = self.surfaces.rail_v(*loading, pair.mains_v, 1.0).unwrap_or(f64::NAN);
+            ratios.push(pair.rail_v / rail_v);
+            if let Some([_, by_second]) = self.surfaces.slopes(*loading, pair.mains_v, 1.0) {
+                widest = widest.max((by_second * priors.second / rail_v).abs());
+            }
+        }
+        let u = [priors.secondary, priors.mains_gain, priors.rail_gain, CREST_HALF_WIDTH, widest];
+        (median(ratios), u.iter().map(|u| u * u).sum::<f64>().sqrt())
+    }
+
     pub(super) fn mains_range(&self) -> [f64; 2] {
         let mains = || self.points.iter().map(|(pair, _)| pair.mains_v);
         [mains().fold(f64::INFINITY, f64::min), mains().fold(f64::NEG_INFINITY, f64::max)]
     }
 
-    /// Residual and its slopes against the parameters.
-    fn residual(&self, (pair, loading): &(Pair, Loading), x: &Vector) -> (f64, Vector) {
+    /// Every residual and its slopes against the parameters; `sigma` is the residuals' spread, as far as it's known.
+    fn residuals(&self, x: &Vector, sigma: f64) -> Vec<(f64, Vector)> {
+        self.points.iter().map(|point| self.residual(point, x, sigma)).collect()
+    }
+
+    fn residual(&self, (pair, loading): &(Pair, Loading), x: &Vector, sigma: f64) -> (f64, Vector) {
         let z = ((pair.mains_v - self.middle_v) / self.half_range_v).clamp(-1.0, 1.0);
         let mains_v = pair.mains_v / (1.0 + x[2]) * (1.0 + x[0]);
         let model = self.surfaces.rail_v(*loading, mains_v, 1.0 + x[1]).unwrap_or(f64::NAN);
@@ -115,15 +139,16 @@ impl<'a> Data<'a> {
             -gain * crest * by_mains * mains_v / (1.0 + x[2]),
             crest * model,
             gain * z * model,
+            if *loading == Loading::Idle { ONE_SIDED * sigma } else { 0.0 },
         ]);
-        (pair.rail_v - gain * crest * model, slopes)
+        (pair.rail_v - gain * crest * model - slopes[5] * x[5], slopes)
     }
 }
 
 /// What the record makes of the parameters.
 #[derive(Clone, Debug)]
 pub(super) struct Posterior {
-    /// (s, p, g_m, g_r, c).
+    /// (s, p, g_m, g_r, c, and the idle level's shift).
     pub(super) x: Vector,
     pub(super) covariance: Matrix,
     /// Robust standard deviation of the residuals, V.
@@ -131,6 +156,8 @@ pub(super) struct Posterior {
     pub(super) independent: f64,
     /// Pairs without any weight.
     pub(super) outliers: usize,
+    /// Standard uncertainty of p if nothing were known of s beforehand: what the record itself knows of p.
+    pub(super) second_by_record: f64,
 }
 
 /// Finds the parameters. `second`: holds p at this value, its prior's doubt kept.
@@ -147,19 +174,26 @@ pub(super) fn solve(data: &Data<'_>, priors: &Priors, second: Option<f64>) -> Po
         })
         .collect();
     x[0] = median(ratios);
-    for _ in 0..STEPS {
-        let residuals: Vec<_> = data.points.iter().map(|point| data.residual(point, &x)).collect();
-        let spread = Spread::of(data, &residuals);
-        let (normal, gradient) = spread.normal(&residuals, &prior, &x);
-        let step = held(&normal, &gradient, second.is_some());
-        x += step;
-        if step.amax() < SETTLED {
-            break;
+    // First with weights that no residual loses, so that a loading far off its nameplate pulls as it should; only
+    // about that answer is a residual told to be an outlier.
+    let (mut sigma, mut share) = (0.0, 0.1);
+    for robust in [Robust::Bounded, Robust::Redescending] {
+        for _ in 0..STEPS {
+            let residuals = data.residuals(&x, sigma);
+            let spread = Spread::of(&residuals, share);
+            sigma = spread.sigma;
+            let (normal, gradient) = spread.normal(&residuals, robust, &prior, &x);
+            let step = held(&normal, &gradient, second.is_some());
+            x += step;
+            if step.amax() < SETTLED {
+                break;
+            }
         }
+        share = independent_share(data, &data.residuals(&x, sigma), sigma);
     }
-    let residuals: Vec<_> = data.points.iter().map(|point| data.residual(point, &x)).collect();
-    let spread = Spread::of(data, &residuals);
-    let (normal, _) = spread.normal(&residuals, &prior, &x);
+    let residuals = data.residuals(&x, sigma);
+    let spread = Spread::of(&residuals, share);
+    let (normal, _) = spread.normal(&residuals, Robust::Redescending, &prior, &x);
     let covariance = match second {
         None => inverse(&normal),
         Some(_) => held_covariance(&normal, prior[1]),
@@ -168,67 +202,70 @@ pub(super) fn solve(data: &Data<'_>, priors: &Priors, second: Option<f64>) -> Po
         x,
         covariance,
         scatter_v: spread.sigma,
-        independent: spread.independent,
-        outliers: residuals.iter().filter(|(r, _)| spread.weight(*r) == 0.0).count(),
+        independent: data.len() as f64 * share,
+        outliers: residuals
+            .iter()
+            .filter(|(r, _)| Robust::Redescending.of(r / spread.sigma).0 == 0.0)
+            .count(),
+        second_by_record: by_record(&normal, prior[0]),
     }
 }
 
-/// The residuals' spread and what it makes of each.
+/// How a residual loses weight with its size.
+#[derive(Clone, Copy, Debug)]
+enum Robust {
+    /// Huber's: beyond some standard deviations it pulls no more than there (P. J. Huber, "Robust estimation of a
+    /// location parameter", 1964).
+    Bounded,
+    /// Tukey's biweight.
+    Redescending,
+}
+
+impl Robust {
+    /// Weight of a residual of `r` standard deviations, and what it adds to the normal matrix.
+    fn of(self, r: f64) -> (f64, f64) {
+        match self {
+            Robust::Bounded => {
+                let weight = (HUBER / r.abs()).min(1.0);
+                (weight, weight)
+            }
+            Robust::Redescending => {
+                let u = r / TUKEY;
+                let weight = if u.abs() < 1.0 { (1.0 - u * u).powi(2) } else { 0.0 };
+                (weight, weight)
+            }
+        }
+    }
+}
+
+/// The residuals' spread.
 struct Spread {
     sigma: f64,
-    independent: f64,
-    /// Independent pairs over all.
+    /// How many independent pairs each pair is worth.
     share: f64,
 }
 
 impl Spread {
-    fn of(data: &Data<'_>, residuals: &[(f64, Vector)]) -> Self {
+    fn of(residuals: &[(f64, Vector)], share: f64) -> Self {
         // The median absolute deviation from nothing: the model has a level of its own.
         let sigma = (1.4826 * median(residuals.iter().map(|(r, _)| r.abs()).collect())).max(LEAST_SCATTER_V);
-        let bounded: Vec<f64> = residuals.iter().map(|(r, _)| r.clamp(-3.0 * sigma, 3.0 * sigma)).collect();
-        let squares: f64 = bounded.iter().map(|r| r * r).sum();
-        let mean_square = squares / bounded.len() as f64;
-        let usual_ms = usual_distance(data);
-        let (mut products, mut neighbours) = (0.0, 0.0);
-        for (both, points) in bounded.windows(2).zip(data.points.windows(2)) {
-            if points[1].0.at_ms - points[0].0.at_ms <= usual_ms {
-                products += both[0] * both[1];
-                neighbours += 1.0;
-            }
-        }
-        let correlated = if neighbours > 0.0 && mean_square > 0.0 {
-            (products / neighbours / mean_square).clamp(0.0, MOST_CORRELATED)
-        } else {
-            0.0
-        };
-        // n·(1 − ρ)/(1 + ρ): the worth of n values of a first-order autoregression.
-        let share = (1.0 - correlated) / (1.0 + correlated);
-        Spread { sigma, independent: bounded.len() as f64 * share, share }
-    }
-
-    /// Tukey's biweight.
-    fn weight(&self, residual: f64) -> f64 {
-        let u = residual / (TUKEY * self.sigma);
-        if u.abs() < 1.0 { (1.0 - u * u).powi(2) } else { 0.0 }
+        Spread { sigma, share }
     }
 
     /// The normal matrix and the right-hand side for a step from `x`.
-    fn normal(&self, residuals: &[(f64, Vector)], prior: &[f64; N], x: &Vector) -> (Matrix, Vector) {
+    fn normal(
+        &self,
+        residuals: &[(f64, Vector)],
+        robust: Robust,
+        prior: &[f64; N],
+        x: &Vector,
+    ) -> (Matrix, Vector) {
         let each = TUKEY_EFFICIENCY * self.share / (self.sigma * self.sigma);
-        // Weighted by the psi-function's mean slope, so that the matrix is that of the covariance too.
-        let slope = residuals
-            .iter()
-            .map(|(r, _)| {
-                let u = r / (TUKEY * self.sigma);
-                if u.abs() < 1.0 { (1.0 - u * u) * (1.0 - 5.0 * u * u) } else { 0.0 }
-            })
-            .sum::<f64>()
-            / residuals.len() as f64;
         let mut normal = Matrix::zeros();
         let mut gradient = Vector::zeros();
         for (residual, slopes) in residuals {
-            let weight = self.weight(*residual);
-            normal += slopes * slopes.transpose() * (each * slope.max(0.1));
+            let (weight, slope) = robust.of(residual / self.sigma);
+            normal += slopes * slopes.transpose() * (each * slope);
             gradient += slopes * (each * weight * residual);
         }
         for i in 0..N {
@@ -239,10 +276,45 @@ impl Spread {
     }
 }
 
+/// How many independent pairs each pair is worth: 1/τ with τ = 1 + 2·Σρₖ, the residuals' integrated correlation in
+/// time, summed up to the first k that is five times what it makes of τ (A. Sokal, "Monte Carlo methods in statistical
+/// mechanics", 1997, section 3).
+fn independent_share(data: &Data<'_>, residuals: &[(f64, Vector)], sigma: f64) -> f64 {
+    let bounded: Vec<f64> = residuals.iter().map(|(r, _)| r.clamp(-3.0 * sigma, 3.0 * sigma)).collect();
+    let mean_square = bounded.iter().map(|r| r * r).sum::<f64>() / bounded.len() as f64;
+    let usual_ms = usual_distance(data);
+    let mut tau = 1.0;
+    for k in 1..bounded.len() {
+        let (mut products, mut neighbours) = (0.0, 0usize);
+        for i in k..bounded.len() {
+            if data.points[i].0.at_ms - data.points[i - k].0.at_ms <= usual_ms * k as i64 {
+                products += bounded[i] * bounded[i - k];
+                neighbours += 1;
+            }
+        }
+        if neighbours < 10 || mean_square == 0.0 {
+            break;
+        }
+        tau += 2.0 * products / neighbours as f64 / mean_square;
+        if k as f64 >= 5.0 * tau {
+            break;
+        }
+    }
+    1.0 / tau.clamp(1.0, bounded.len() as f64)
+}
+
 /// The usual distance of neighbouring pairs, and a half more, ms.
 fn usual_distance(data: &Data<'_>) -> i64 {
     let steps: Vec<f64> = data.points.windows(2).map(|p| (p[1].0.at_ms - p[0].0.at_ms) as f64).collect();
     if steps.is_empty() { 0 } else { (1.5 * median(steps)) as i64 }
+}
+
+/// Standard uncertainty of p with the prior of s, whose standard uncertainty is `prior`, taken away.
+fn by_record(normal: &Matrix, prior: f64) -> f64 {
+    let mut flat = *normal;
+    // All but a trace of it: what the record says nothing of must stay finite.
+    flat[(0, 0)] -= (1.0 - 1e-6) / (prior * prior);
+    inverse(&flat)[(1, 1)].sqrt()
 }
 
 /// A step in which p stays where it is.

@@ -35,7 +35,11 @@ const FEWEST_PAIRS: usize = 20;
 /// practice, no source).
 const IDLE_CURRENT_DOUBT: f64 = 0.05;
 
-/// The record has told the second parameter if it has shrunk its doubt to this part of the prior's.
+/// A record whose level is this many standard uncertainties off the nameplate's is of another supply.
+const FARTHEST: f64 = 5.0;
+
+/// The record has told the second parameter if by itself, whatever the secondary, it has shrunk its doubt to this part
+/// of the prior's.
 const TOLD: f64 = 0.6;
 
 /// The parameter that is fitted beside the secondary's e.m.f.
@@ -230,7 +234,7 @@ pub enum FitError {
     },
     /// The record contradicts the supply: no parameters near the nameplate explain it.
     #[error(
-        "the record doesn't fit the supply of {amplifier}: the rail stands {ratio_pct:.0} % of what the config gives, \
+        "the record doesn't fit the supply of {amplifier}: the rail stands at {ratio_pct:.0} % of what the config gives, \
          further off than its doubts allow; check the config, or which node the channel measures"
     )]
     Contradiction {
@@ -299,15 +303,16 @@ fn fit_surfaces(
         let PairsSeen { all, off, warming_up, loaded, .. } = seen;
         return Err(FitError::TooFew { usable: data.len(), all, off, warming_up, loaded });
     }
-    let free = least_squares::solve(&data, &priors, None);
-    let told_apart = free.covariance[(1, 1)].sqrt() < TOLD * priors.second;
-    let posterior = if told_apart { free } else { least_squares::solve(&data, &priors, Some(0.0)) };
-    if posterior.x[0].abs() > 6.0 * priors.secondary.max(0.01) {
+    let (ratio, u) = data.level(&priors);
+    if (ratio - 1.0).abs() > FARTHEST * u {
         return Err(FitError::Contradiction {
             amplifier: circuit.amplifier.clone(),
-            ratio_pct: 100.0 * (1.0 + posterior.x[0]),
+            ratio_pct: 100.0 * ratio,
         });
     }
+    let free = least_squares::solve(&data, &priors, None);
+    let told_apart = free.second_by_record < TOLD * priors.second;
+    let posterior = if told_apart { free } else { least_squares::solve(&data, &priors, Some(0.0)) };
     seen.outliers = posterior.outliers;
     Ok(describe(circuit, node, second, told_apart, seen, &data, &priors, &posterior))
 }

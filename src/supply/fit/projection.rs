@@ -25,7 +25,12 @@ impl Projector {
     ///
     /// # Errors
     /// As [`crate::supply::steady_state`], for the first point that fails.
-    pub fn from_fit(circuit: &Circuit, fit: &Fit, grid: Grid, options: &SolveOptions) -> Result<Self, SolveError> {
+    pub fn from_fit(
+        circuit: &Circuit,
+        fit: &Fit,
+        grid: Grid,
+        options: &SolveOptions,
+    ) -> Result<Self, SolveError> {
         let fitted = settled(fit.applied(circuit));
         let mut curves = Vec::new();
         for loading in Loading::ALL.into_iter().filter(|&loading| circuit.knows(loading)) {
@@ -78,12 +83,13 @@ fn curves_of(
                 Uncertain::combine([fit.rail_u(slopes), 2.0 * fit.residual_v, doubts[k][i]])
             })
             .collect();
-        let curve = SolvedCurve::through(mains_v.clone(), rails[k].clone(), at_v.clone(), u).ok_or_else(|| {
-            SolveError::Circuit {
-                amplifier: fitted.amplifier.clone(),
-                what: format!("mains from {} to {} V make no grid", grid.from_v, grid.to_v),
-            }
-        })?;
+        let curve =
+            SolvedCurve::through(mains_v.clone(), rails[k].clone(), at_v.clone(), u).ok_or_else(|| {
+                SolveError::Circuit {
+                    amplifier: fitted.amplifier.clone(),
+                    what: format!("mains from {} to {} V make no grid", grid.from_v, grid.to_v),
+                }
+            })?;
         let curve = RailCurve::Solved(Arc::new(curve));
         curves.push(NodeCurve { node: section.node.clone(), loading, curve });
     }

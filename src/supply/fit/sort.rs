@@ -49,10 +49,10 @@ pub(super) fn sort(
     let ratios: Vec<f64> = pairs.iter().map(|pair| pair.rail_v / idle_v(pair)).collect();
     let levels = Levels::of(pairs, &ratios, surfaces, priors);
     let mut doing: Vec<Doing> = ratios.iter().map(|ratio| levels.of_ratio(*ratio, word)).collect();
-    mark_switching(pairs, &mut doing);
     if word.is_none() {
         keep_steady_unloaded(pairs, &mut doing);
     }
+    mark_switching(pairs, &mut doing);
     doing
 }
 
@@ -136,15 +136,18 @@ fn mark_switching(pairs: &[Pair], doing: &mut [Doing]) {
             continue;
         }
         let after_rest = i > 0 && joined(i) && rests(before[i - 1]);
+        // The valves warm up, or warm up again, from standby too.
+        let cold = Doing::In(Loading::Unloaded);
+        let after_standby = i > 0 && joined(i) && before[i - 1] == cold && before[i] != cold;
         let before_rest = i + 1 < pairs.len() && joined(i + 1) && rests(before[i + 1]);
-        if after_rest {
+        if after_rest || after_standby {
             on_since = Some(pairs[i].at_ms);
         } else if i > 0 && !joined(i) {
             on_since = None;
         }
         let drifting = before[i] != Doing::In(Loading::Unloaded)
             && on_since.is_some_and(|since| pairs[i].at_ms - since < WARM_UP_MS);
-        if after_rest || before_rest || drifting {
+        if after_rest || after_standby || before_rest || drifting {
             doing[i] = Doing::WarmingUp;
         }
     }
