@@ -6,7 +6,12 @@
 pub(super) struct MonotoneCubic {
     x: Vec<f64>,
     y: Vec<f64>,
-    slope: Vec<f64>,
+    /// Of each piece, by powers of the distance from its start.
+    pieces: Vec<[f64; 4]>,
+    /// Slope at the last point.
+    last_slope: f64,
+    /// Pieces per unit of x on average: where x is even this finds the piece at once.
+    pieces_per_x: f64,
 }
 
 /// Halvings that a backward reading takes at most: the interval is then narrower than a double can tell.
@@ -35,7 +40,16 @@ impl MonotoneCubic {
             let shrink = if radius > 3.0 { 3.0 / radius } else { 1.0 };
             (slope[k], slope[k + 1]) = (shrink * alpha * secant, shrink * beta * secant);
         }
-        Some(MonotoneCubic { x, y, slope })
+        let pieces = (0..secant.len())
+            .map(|k| {
+                let h = x[k + 1] - x[k];
+                let second = (3.0 * secant[k] - 2.0 * slope[k] - slope[k + 1]) / h;
+                let third = (slope[k] + slope[k + 1] - 2.0 * secant[k]) / (h * h);
+                [y[k], slope[k], second, third]
+            })
+            .collect();
+        let pieces_per_x = secant.len() as f64 / (x[x.len() - 1] - x[0]);
+        Some(MonotoneCubic { last_slope: slope[slope.len() - 1], x, y, pieces, pieces_per_x })
     }
 
     /// First and last x.
@@ -47,11 +61,10 @@ impl MonotoneCubic {
     pub(super) fn at(&self, x: f64) -> f64 {
         let (low, high) = self.span();
         if x < low {
-            return self.y[0] + self.slope[0] * (x - low);
+            return self.y[0] + self.pieces[0][1] * (x - low);
         }
         if x > high {
-            let last = self.y.len() - 1;
-            return self.y[last] + self.slope[last] * (x - high);
+            return self.y[self.y.len() - 1] + self.last_slope * (x - high);
         }
         self.value(self.piece(x), x)
     }
@@ -59,12 +72,10 @@ impl MonotoneCubic {
     /// dy/dx at `x`.
     pub(super) fn slope_at(&self, x: f64) -> f64 {
         let (low, high) = self.span();
-        let k = self.piece(x.clamp(low, high));
-        let (h, t) = self.place(k, x.clamp(low, high));
-        let rise = (self.y[k + 1] - self.y[k]) / h;
-        6.0 * t * (1.0 - t) * rise
-            + (1.0 - t) * (1.0 - 3.0 * t) * self.slope[k]
-            + t * (3.0 * t - 2.0) * self.slope[k + 1]
+        let x = x.clamp(low, high);
+        let k = self.piece(x);
+        let (d, [_, first, second, third]) = (x - self.x[k], self.pieces[k]);
+        first + d * (2.0 * second + d * 3.0 * third)
     }
 
     /// The x at which a rising curve stands at `y`, within its span.
@@ -87,21 +98,20 @@ impl MonotoneCubic {
 
     /// Index of the piece that holds `x`, which lies within the span.
     fn piece(&self, x: f64) -> usize {
-        self.x.partition_point(|&at| at <= x).clamp(1, self.x.len() - 1) - 1
-    }
-
-    /// The piece's width, and where in it `x` lies, from 0 to 1.
-    fn place(&self, k: usize, x: f64) -> (f64, f64) {
-        let h = self.x[k + 1] - self.x[k];
-        (h, (x - self.x[k]) / h)
+        let last = self.pieces.len() - 1;
+        let mut k = (((x - self.x[0]) * self.pieces_per_x) as usize).min(last);
+        while k > 0 && x < self.x[k] {
+            k -= 1;
+        }
+        while k < last && x >= self.x[k + 1] {
+            k += 1;
+        }
+        k
     }
 
     fn value(&self, k: usize, x: f64) -> f64 {
-        let (h, t) = self.place(k, x);
-        let u = 1.0 - t;
-        u * u * (1.0 + 2.0 * t) * self.y[k]
-            + t * t * (3.0 - 2.0 * t) * self.y[k + 1]
-            + h * t * u * (u * self.slope[k] - t * self.slope[k + 1])
+        let (d, [start, first, second, third]) = (x - self.x[k], self.pieces[k]);
+        start + d * (first + d * (second + d * third))
     }
 }
 

@@ -96,6 +96,8 @@ pub(super) struct Network {
     pub(super) leak_state: Option<usize>,
     pub(super) pair: Option<Pair>,
     pub(super) nodes: Vec<Node>,
+    /// How many nodes there are up to the last whose loads follow a law that bends.
+    pub(super) bent: usize,
     /// How many states there are.
     pub(super) states: usize,
     /// Whether the second half-period repeats the first with the halves exchanged (the wave permitting).
@@ -168,6 +170,7 @@ impl Network {
             RectifierCircuit::HalfWave => false,
             RectifierCircuit::Doubler => !has_drop && pair.is_some_and(|p| p.farad[0] == p.farad[1]),
         };
+        let bent = nodes.iter().rposition(|node| !node.laws.is_empty()).map_or(0, |last| last + 1);
         let draws_nothing = nodes.iter().all(|node| node.siemens == 0.0 && node.laws.is_empty());
         Ok(Network {
             wiring: circuit.rectifier,
@@ -182,6 +185,7 @@ impl Network {
             leak_state,
             pair,
             nodes,
+            bent,
             states,
             symmetric,
             draws_nothing,

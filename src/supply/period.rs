@@ -49,6 +49,9 @@ pub(super) struct Walker {
     first: Vec<f64>,
     base: Vec<f64>,
     before: Vec<f64>,
+    /// Node voltages at the ends of the last steps.
+    behind: Vec<f64>,
+    ahead: Vec<f64>,
     d_first: Vec<f64>,
     d_base: Vec<f64>,
 }
@@ -61,6 +64,8 @@ impl Walker {
             first: vec![0.0; m],
             base: vec![0.0; m],
             before: vec![0.0; m],
+            behind: vec![0.0; net.nodes.len()],
+            ahead: vec![0.0; net.nodes.len()],
             d_first: vec![0.0; mm],
             d_base: vec![0.0; mm],
         }
@@ -80,12 +85,20 @@ impl Walker {
         let mut measures = Measures::new(net);
         let (mut conducts, mut overlaps) = (Windows::default(), Windows::default());
         let span = if drive.half { 0.5 } else { 1.0 };
+        let mut last_a = 0.0;
         for step in &drive.mesh.steps {
             let a = ALPHA * step.length * drive.period_s;
             let stuck = Stuck { at_deg: 360.0 * step.start };
             let emf = step.wave.map(|wave| wave * drive.emf_v);
             let weight = step.length / span;
 
+            // The node voltages go on as they went in the last step, then as they went in the first stage.
+            self.ahead.copy_from_slice(&self.stage.v);
+            if last_a > 0.0 {
+                self.stage.guess_along(&self.behind, 1.0 + ALPHA * a / last_a);
+            }
+            self.behind.copy_from_slice(&self.ahead);
+            last_a = a;
             self.stage.solve(net, emf[0], a, &y, &mut self.first).ok_or(stuck)?;
             self.stage.carry(net, &tangent, &mut self.d_first);
             measures.add(net, &self.stage, emf[0], weight * (1.0 - ALPHA));
@@ -98,6 +111,7 @@ impl Walker {
                 *base = d + FORWARD * (first - d);
             }
             self.before.copy_from_slice(&y);
+            self.stage.guess_along(&self.behind, 1.0 / ALPHA);
             self.stage.solve(net, emf[1], a, &self.base, &mut y).ok_or(stuck)?;
             self.stage.carry(net, &self.d_base, &mut tangent);
             measures.add(net, &self.stage, emf[1], weight * ALPHA);

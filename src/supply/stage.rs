@@ -13,7 +13,7 @@ use super::paths::{Balance, PathCurrents};
 const MOST_WALKS: usize = 60;
 
 /// A load's current counts as right when what the linearisation left out is less than this part of it.
-const LOAD_TOLERANCE: f64 = 1e-9;
+const LOAD_TOLERANCE: f64 = 1e-8;
 
 /// All that one stage knows; kept between stages as the next one's guess, and so that nothing is allocated.
 #[derive(Clone, Debug, Default)]
@@ -30,8 +30,11 @@ pub(super) struct Stage {
     pub(super) paths: PathCurrents,
     a: f64,
     shunt_siemens: Vec<f64>,
+    shunt_ohm: Vec<f64>,
+    reactance: Vec<f64>,
     about_v: Vec<f64>,
     load_siemens: Vec<f64>,
+    load_source: Vec<f64>,
     node_siemens: Vec<f64>,
     node_ohm: Vec<f64>,
     node_source: Vec<f64>,
@@ -39,6 +42,8 @@ pub(super) struct Stage {
     series_v: Vec<f64>,
     tangent_node: Vec<f64>,
     tangent_series: Vec<f64>,
+    tangent_i: Vec<f64>,
+    tangent_v: Vec<f64>,
 }
 
 impl Stage {
@@ -51,8 +56,11 @@ impl Stage {
             shunt_i: zeros.clone(),
             drawn: zeros.clone(),
             shunt_siemens: zeros.clone(),
+            shunt_ohm: zeros.clone(),
+            reactance: zeros.clone(),
             about_v: zeros.clone(),
             load_siemens: zeros.clone(),
+            load_source: zeros.clone(),
             node_siemens: zeros.clone(),
             node_ohm: zeros.clone(),
             node_source: zeros.clone(),
@@ -60,6 +68,8 @@ impl Stage {
             series_v: zeros,
             tangent_node: columns.clone(),
             tangent_series: columns.clone(),
+            tangent_i: vec![0.0; net.states],
+            tangent_v: vec![0.0; net.states],
             ..Stage::default()
         }
     }
@@ -73,10 +83,13 @@ impl Stage {
         base: &[f64],
         y: &mut [f64],
     ) -> Option<()> {
-        self.a = a;
+        if a != self.a {
+            self.settle_step(net, a);
+        }
         for _ in 0..MOST_WALKS {
             self.linearise_loads(net);
-            self.fold(net, base);
+            self.fold_siemens(net, net.bent);
+            self.fold_sources(net, base);
             self.solve_paths(net, emf, base)?;
             self.unfold(net, base, y);
             if self.loads_are_right(net) {
@@ -86,24 +99,32 @@ impl Stage {
         None
     }
 
+    /// Guesses the node voltages along a straight line, `part` times as far on from `from` as they lie now.
+    pub(super) fn guess_along(&mut self, from: &[f64], part: f64) {
+        for (v, from) in self.v.iter_mut().zip(from) {
+            *v = from + part * (*v - from);
+        }
+    }
+
     /// How many paths conduct.
     pub(super) fn conducting(&self) -> usize {
         self.paths.i.iter().filter(|i| **i > 0.0).count()
     }
 
     fn linearise_loads(&mut self, net: &Network) {
-        for (k, node) in net.nodes.iter().enumerate() {
-            let v = self.v[k];
-            let (i, siemens) =
-                if node.laws.is_empty() { (node.siemens * v, node.siemens) } else { node.drawn(v) };
-            self.about_v[k] = v;
-            self.drawn[k] = i;
-            self.load_siemens[k] = siemens;
+        for (k, node) in net.nodes.iter().enumerate().take(net.bent) {
+            if !node.laws.is_empty() {
+                let v = self.v[k];
+                let (i, siemens) = node.drawn(v);
+                self.about_v[k] = v;
+                self.load_siemens[k] = siemens;
+                self.load_source[k] = i - siemens * v;
+            }
         }
     }
 
     fn loads_are_right(&self, net: &Network) -> bool {
-        net.nodes.iter().enumerate().all(|(k, node)| {
+        net.nodes.iter().enumerate().take(net.bent).all(|(k, node)| {
             if node.laws.is_empty() {
                 return true;
             }
@@ -117,33 +138,44 @@ impl Stage {
         })
     }
 
-    /// From the far end: each node with all behind it as a source and a resistance.
-    fn fold(&mut self, net: &Network, base: &[f64]) {
-        let a = self.a;
-        let mut behind = (0.0, 0.0);
-        for (k, node) in net.nodes.iter().enumerate().rev() {
-            let mut siemens = self.load_siemens[k] + behind.0;
-            let mut source = self.drawn[k] - self.load_siemens[k] * self.about_v[k] + behind.1;
+    /// What of the ladder depends on the step alone.
+    fn settle_step(&mut self, net: &Network, a: f64) {
+        self.a = a;
+        for (k, node) in net.nodes.iter().enumerate() {
             if let Some(shunt) = node.shunt {
-                let own = 1.0 / (shunt.esr_ohm + a / shunt.farad);
-                self.shunt_siemens[k] = own;
-                siemens += own;
-                source -= own * base[shunt.state];
+                self.shunt_ohm[k] = a / shunt.farad;
+                self.shunt_siemens[k] = 1.0 / (shunt.esr_ohm + self.shunt_ohm[k]);
             }
+            self.reactance[k] = node.choke.map_or(0.0, |choke| choke.henry / a);
+            self.load_siemens[k] = node.siemens;
+        }
+        self.fold_siemens(net, net.nodes.len());
+    }
+
+    /// From the far end: the conductance of each of the first `count` nodes with all behind it.
+    fn fold_siemens(&mut self, net: &Network, count: usize) {
+        for k in (0..count).rev() {
+            let behind = self.series_siemens.get(k + 1).copied().unwrap_or(0.0);
+            let siemens = self.load_siemens[k] + self.shunt_siemens[k] + behind;
             self.node_siemens[k] = siemens;
-            self.node_source[k] = source;
             // A doubler's first node may hold nothing but its pair.
             self.node_ohm[k] = if siemens > 0.0 { 1.0 / siemens } else { 0.0 };
-            let (ohm, series_v) = match node.choke {
-                Some(choke) => {
-                    let reactance = choke.henry / a;
-                    (node.series_ohm + reactance, -reactance * base[choke.state])
-                }
-                None => (node.series_ohm, 0.0),
-            };
-            self.series_siemens[k] = 1.0 / (ohm + self.node_ohm[k]);
-            self.series_v[k] = series_v - source * self.node_ohm[k];
-            behind = (self.series_siemens[k], -self.series_siemens[k] * self.series_v[k]);
+            self.series_siemens[k] = 1.0 / (net.nodes[k].series_ohm + self.reactance[k] + self.node_ohm[k]);
+        }
+    }
+
+    /// From the far end: the source of each node with all behind it.
+    fn fold_sources(&mut self, net: &Network, base: &[f64]) {
+        let mut behind = 0.0;
+        for (k, node) in net.nodes.iter().enumerate().rev() {
+            let mut source = self.load_source[k] + behind;
+            if let Some(shunt) = node.shunt {
+                source -= self.shunt_siemens[k] * base[shunt.state];
+            }
+            self.node_source[k] = source;
+            let held = node.choke.map_or(0.0, |choke| self.reactance[k] * base[choke.state]);
+            self.series_v[k] = -held - source * self.node_ohm[k];
+            behind = -self.series_siemens[k] * self.series_v[k];
         }
     }
 
@@ -203,7 +235,6 @@ impl Stage {
 
     /// From the rectifier: every voltage and current, and the new states.
     fn unfold(&mut self, net: &Network, base: &[f64], y: &mut [f64]) {
-        let a = self.a;
         let [positive, negative] = self.paths.i;
         if let Some(at) = net.leak_state {
             match net.wiring {
@@ -228,14 +259,14 @@ impl Stage {
             };
             self.i[k] = i;
             self.v[k] = v;
-            self.drawn[k] += self.load_siemens[k] * (v - self.about_v[k]);
+            self.drawn[k] = self.load_source[k] + self.load_siemens[k] * v;
             if let Some(choke) = node.choke {
                 y[choke.state] = i;
             }
             if let Some(shunt) = node.shunt {
                 let i = self.shunt_siemens[k] * (v - base[shunt.state]);
                 self.shunt_i[k] = i;
-                y[shunt.state] = base[shunt.state] + a / shunt.farad * i;
+                y[shunt.state] = base[shunt.state] + self.shunt_ohm[k] * i;
             }
         }
     }
@@ -255,27 +286,70 @@ impl Stage {
     /// solved, into `d_y`.
     pub(super) fn carry(&mut self, net: &Network, d_base: &[f64], d_y: &mut [f64]) {
         let m = net.states;
-        let a = self.a;
-        let row = |matrix: &[f64], state: usize, c: usize| matrix[state * m + c];
-        for k in (0..net.nodes.len()).rev() {
-            let node = &net.nodes[k];
-            let (node_ohm, shunt_siemens) = (self.node_ohm[k], self.shunt_siemens[k]);
-            let behind = self.series_siemens.get(k + 1).copied();
-            for c in 0..m {
-                let mut source = 0.0;
-                if let Some(shunt) = node.shunt {
-                    source -= shunt_siemens * row(d_base, shunt.state, c);
+        self.fold_tangents(net, d_base);
+        self.carry_paths(net, d_base, d_y);
+        for (k, node) in net.nodes.iter().enumerate() {
+            let (ohm, siemens) = (self.node_ohm[k], self.series_siemens[k]);
+            if k > 0 {
+                let series = &self.tangent_series[k * m..(k + 1) * m];
+                let source = &self.tangent_node[k * m..(k + 1) * m];
+                for c in 0..m {
+                    let i = siemens * (self.tangent_v[c] - series[c]);
+                    self.tangent_i[c] = i;
+                    self.tangent_v[c] = (i - source[c]) * ohm;
                 }
-                if let Some(siemens) = behind {
-                    source -= siemens * self.tangent_series[(k + 1) * m + c];
+            }
+            if let Some(choke) = node.choke {
+                d_y[choke.state * m..(choke.state + 1) * m].copy_from_slice(&self.tangent_i);
+            }
+            if let Some(shunt) = node.shunt {
+                let part = self.shunt_ohm[k] * self.shunt_siemens[k];
+                let row = shunt.state * m..(shunt.state + 1) * m;
+                for ((y, &base), &v) in d_y[row.clone()].iter_mut().zip(&d_base[row]).zip(&self.tangent_v) {
+                    *y = base + part * (v - base);
                 }
-                let held = node.choke.map_or(0.0, |choke| choke.henry / a * row(d_base, choke.state, c));
-                self.tangent_node[k * m + c] = source;
-                self.tangent_series[k * m + c] = -held - source * node_ohm;
             }
         }
+    }
+
+    /// From the far end: how the sources answer.
+    fn fold_tangents(&mut self, net: &Network, d_base: &[f64]) {
+        let m = net.states;
+        for (k, node) in net.nodes.iter().enumerate().rev() {
+            let ohm = self.node_ohm[k];
+            let (here, behind) = self.tangent_series.split_at_mut((k + 1) * m);
+            let series = &mut here[k * m..];
+            let source = &mut self.tangent_node[k * m..(k + 1) * m];
+            source.fill(0.0);
+            if let Some(shunt) = node.shunt {
+                let siemens = self.shunt_siemens[k];
+                for (source, base) in source.iter_mut().zip(&d_base[shunt.state * m..]) {
+                    *source -= siemens * base;
+                }
+            }
+            if let Some(siemens) = self.series_siemens.get(k + 1) {
+                for (source, behind) in source.iter_mut().zip(&behind[..m]) {
+                    *source -= siemens * behind;
+                }
+            }
+            for (series, source) in series.iter_mut().zip(&*source) {
+                *series = -source * ohm;
+            }
+            if let Some(choke) = node.choke {
+                let reactance = self.reactance[k];
+                for (series, base) in series.iter_mut().zip(&d_base[choke.state * m..]) {
+                    *series -= reactance * base;
+                }
+            }
+        }
+    }
+
+    /// How the paths answer, and with them the winding, a doubler's pair and the first node.
+    fn carry_paths(&mut self, net: &Network, d_base: &[f64], d_y: &mut [f64]) {
+        let m = net.states;
+        let row = |matrix: &[f64], state: usize, c: usize| matrix[state * m + c];
         let [own_p, mutual, own_n] = self.paths.siemens;
-        let reactance = net.leakage_h / a;
+        let reactance = net.leakage_h / self.a;
         for c in 0..m {
             let held = net.leak_state.map_or(0.0, |at| reactance * row(d_base, at, c));
             let pair = net.pair.and_then(|pair| Some((pair.state, self.open_pair_tangent(net, d_base, c)?)));
@@ -297,28 +371,15 @@ impl Stage {
                     d_y[at * m + c] = positive - negative;
                 }
             }
-            let (mut i, mut v);
             if let Some((state, open)) = pair {
-                v = open.node_v + open.share * (open.ohm[0] * positive + open.ohm[1] * negative);
-                i = self.node_siemens[0] * v + self.tangent_node[c];
+                let v = open.node_v + open.share * (open.ohm[0] * positive + open.ohm[1] * negative);
+                let i = self.node_siemens[0] * v + self.tangent_node[c];
                 d_y[state * m + c] = row(d_base, state, c) + open.ohm[0] * (positive - i);
                 d_y[(state + 1) * m + c] = row(d_base, state + 1, c) + open.ohm[1] * (negative - i);
+                (self.tangent_i[c], self.tangent_v[c]) = (i, v);
             } else {
-                i = positive + negative;
-                v = (i - self.tangent_node[c]) * self.node_ohm[0];
-            }
-            for (k, node) in net.nodes.iter().enumerate() {
-                if k > 0 {
-                    i = self.series_siemens[k] * (v - self.tangent_series[k * m + c]);
-                    v = (i - self.tangent_node[k * m + c]) * self.node_ohm[k];
-                }
-                if let Some(choke) = node.choke {
-                    d_y[choke.state * m + c] = i;
-                }
-                if let Some(shunt) = node.shunt {
-                    let base = row(d_base, shunt.state, c);
-                    d_y[shunt.state * m + c] = base + a / shunt.farad * self.shunt_siemens[k] * (v - base);
-                }
+                let i = positive + negative;
+                (self.tangent_i[c], self.tangent_v[c]) = (i, (i - self.tangent_node[c]) * self.node_ohm[0]);
             }
         }
     }
