@@ -13,6 +13,7 @@ mod channels;
 mod columns;
 mod copy;
 mod error;
+mod fits;
 mod hours;
 mod intervals;
 mod lock;

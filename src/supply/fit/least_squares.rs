@@ -45,6 +45,9 @@ const LEAST_SCATTER_V: f64 = 0.02;
 const STEPS: usize = 30;
 const SETTLED: f64 = 1e-9;
 
+/// More pairs than this are thinned evenly: neighbouring minutes hardly say more, and a year has half a million.
+const MOST_PAIRS: usize = 20_000;
+
 /// Standard uncertainties of the parameters before the record is looked at, all relative.
 #[derive(Clone, Copy, Debug)]
 pub(super) struct Priors {
@@ -91,6 +94,8 @@ impl<'a> Data<'a> {
                 _ => None,
             })
             .collect();
+        let every = points.len().div_ceil(MOST_PAIRS).max(1);
+        let points: Vec<_> = points.into_iter().step_by(every).collect();
         let mut mains: Vec<f64> = points.iter().map(|(pair, _)| pair.mains_v).collect();
         mains.sort_by(f64::total_cmp);
         let at = |share: f64| mains.get(((mains.len() as f64 - 1.0).max(0.0) * share) as usize).copied();

@@ -24,7 +24,7 @@ use sha2::{Digest, Sha256};
 
 use super::circuit::{Circuit, Load, Loading};
 use super::steady::SolveError;
-use crate::quantity::rectangular_u;
+use crate::quantity::{Utc, rectangular_u};
 use least_squares::{Data, Posterior, Priors};
 use surface::Surfaces;
 
@@ -193,6 +193,19 @@ impl Fit {
 
 fn quadratic(covariance: &[[f64; 2]; 2], g: [f64; 2]) -> f64 {
     (0..2).flat_map(|i| (0..2).map(move |j| g[i] * covariance[i][j] * g[j])).sum()
+}
+
+/// A fit as the record keeps it.
+#[derive(Clone, Debug, PartialEq)]
+pub struct RecordedFit {
+    /// When it was made.
+    pub made_at: Utc,
+    /// The first of its pairs.
+    pub from: Utc,
+    /// The end of its last pair.
+    pub to: Utc,
+    /// What it says.
+    pub fit: Fit,
 }
 
 /// Why there is no fit.

@@ -1,7 +1,5 @@
 //! Pairs of mains and rail, made of two channels' readings.
 
-use std::collections::BTreeMap;
-
 /// One reading of a channel: milliseconds of universal time, and volts.
 pub type Sampled = (i64, f64);
 
@@ -16,29 +14,40 @@ pub struct Pair {
     pub rail_v: f64,
 }
 
-/// Pairs of the stretches of `width_ms` in which both channels have readings, in order of time. Readings may come in
-/// any order.
+/// Pairs of the stretches of `width_ms` in which both channels have readings, in order of time. Each channel's readings
+/// come in order of time, so that a year of them needs no room.
 pub fn pairs(
     mains: impl IntoIterator<Item = Sampled>,
     rail: impl IntoIterator<Item = Sampled>,
     width_ms: i64,
 ) -> Vec<Pair> {
-    let (mains, mut rail) = (stretches(mains, width_ms), stretches(rail, width_ms));
-    mains
-        .into_iter()
-        .filter_map(|(stretch, mains)| {
-            let rail = rail.remove(&stretch)?;
-            Some(Pair { at_ms: stretch * width_ms, mains_v: median(mains), rail_v: median(rail) })
-        })
-        .collect()
+    let mut rail = stretches(rail, width_ms).into_iter().peekable();
+    let mut pairs = Vec::new();
+    for (stretch, mains_v) in stretches(mains, width_ms) {
+        while rail.next_if(|(other, _)| *other < stretch).is_some() {}
+        if let Some((_, rail_v)) = rail.next_if(|(other, _)| *other == stretch) {
+            pairs.push(Pair { at_ms: stretch * width_ms, mains_v, rail_v });
+        }
+    }
+    pairs
 }
 
-fn stretches(readings: impl IntoIterator<Item = Sampled>, width_ms: i64) -> BTreeMap<i64, Vec<f64>> {
-    let mut stretches: BTreeMap<i64, Vec<f64>> = BTreeMap::new();
+/// The median of each stretch that holds a reading.
+fn stretches(readings: impl IntoIterator<Item = Sampled>, width_ms: i64) -> Vec<(i64, f64)> {
+    let mut done: Vec<(i64, f64)> = Vec::new();
+    let (mut now, mut values) = (i64::MIN, Vec::new());
     for (at_ms, volts) in readings {
-        stretches.entry(at_ms.div_euclid(width_ms)).or_default().push(volts);
+        let stretch = at_ms.div_euclid(width_ms);
+        if stretch != now && !values.is_empty() {
+            done.push((now, median(std::mem::take(&mut values))));
+        }
+        now = stretch;
+        values.push(volts);
     }
-    stretches
+    if !values.is_empty() {
+        done.push((now, median(values)));
+    }
+    done
 }
 
 /// The middle value, of an even number the mean of the two middle ones; `values` isn't empty.
