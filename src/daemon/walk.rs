@@ -335,7 +335,7 @@ webhook = "http://127.0.0.1:9/"
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
             let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
-            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site), remembered, clock.now());
+            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site, &store).unwrap(), remembered, clock.now());
             let time = TimeBase::new(clock.now(), restored.newest);
             let (early, placed) = Early::begin(&clock, &time, &restored);
             store.commit(&crate::store::Batch { placed, ..Default::default() }).unwrap();

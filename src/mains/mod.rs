@@ -14,7 +14,7 @@ mod profile;
 mod rules;
 mod verdict;
 
-pub use civil::{CivilDay, DayKind, civil_days};
+pub use civil::{CivilDay, DayKind, civil_days, start_of};
 pub use events::{Event, EventKind, EventLimits, Sample, Spell, events, excursions};
 pub use histogram::Histogram;
 pub use interval::{Aggregator, INTERVAL, Interval, WHOLE_FROM, intervals, intervals_of};

@@ -14,6 +14,7 @@ mod columns;
 mod copy;
 mod error;
 mod growth;
+mod fits;
 mod hours;
 mod intervals;
 mod lock;

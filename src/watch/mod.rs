@@ -5,12 +5,17 @@
 //! memory; whoever drives it commits what it [`Decided`] before telling anybody.
 
 mod channel;
+mod faults;
+mod findings;
 mod ledger;
 mod parts;
+mod projecting;
 mod rail;
 
 pub use channel::{fresh_for, is_plausible, uncertain};
+pub use findings::findings;
 pub use parts::{CapacitorWatch, PartWatch};
+pub use projecting::{Projecting, projecting, valid_fit};
 pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches};
 
 use std::time::Duration;
@@ -19,7 +24,7 @@ use crate::alarm::{
     AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction,
     RoomFigures, State,
 };
-use crate::config::{Amplifier, Site};
+use crate::config::Site;
 use crate::quantity::{Moment, Mono};
 use crate::reading::{ChannelId, Reading, Stamp};
 use crate::supply::Projector;
@@ -81,12 +86,6 @@ struct WatchedLogger {
     sample_period: Duration,
     last_line: Mono,
     disconnected: Option<String>,
-}
-
-/// The projector of an amplifier from its config alone: the short way, if that is stated.
-pub fn projector(amplifier: &Amplifier) -> Option<Projector> {
-    let measured = amplifier.measured.as_ref()?;
-    Some(Projector::from_measured(&measured.node, measured.loading, measured.pair.clone()))
 }
 
 impl Watch {
