@@ -1,11 +1,13 @@
 //! The daemon: starts the loggers' threads, the notice worker and the walk, joins them, stops them.
 //!
-//! One task walks every reading through the house ([`walk`]): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
+//! One task walks every reading through the house (the module `walk`): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
 //! ─▶ notice. Loggers and the notice worker speak to it over bounded channels and know nothing of one another.
 
 mod alone;
+mod early;
 mod held;
 mod hush;
+mod upkeep;
 mod walk;
 
 use std::future::Future;
@@ -17,12 +19,13 @@ use crate::clock::{Clock, TimeBase};
 use crate::config::Site;
 use crate::logger::{self, PortHandle};
 use crate::notice::{NoticeError, Waiting, Worker};
-use crate::store::{self, ChannelSpec, Lock, OpenOptions, Store, StoreError};
+use crate::store::{self, Batch, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
 use crate::watch::{self, Watch, projector};
 
 pub use alone::apply_alone;
 
+use early::Early;
 use walk::Walk;
 
 /// Delays are looked at this often when no reading comes.
@@ -65,6 +68,8 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let now = clock.now();
     let watch = Watch::new(site, &ids, &projectors(site), remembered, now);
     let time = TimeBase::new(now, restored.newest);
+    let (early, placed) = Early::begin(&clock, &time, &restored);
+    store.commit(&Batch { placed, ..Batch::default() })?;
 
     let (outcome_tx, mut outcomes) = mpsc::channel(64);
     let worker = Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcome_tx)?;
@@ -80,7 +85,7 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     drop(event_tx);
     tracing::info!(database = %site.store.path.display(), "railtide is watching {}", site.name);
 
-    let mut walk = Walk::new(site, clock.clone(), time, watch, store, worker);
+    let mut walk = Walk::new(site, clock.clone(), time, early, watch, store, worker);
     tokio::pin!(shutdown);
     let mut next_tick = now.mono + TICK;
     loop {

@@ -9,7 +9,7 @@ mod ledger;
 mod parts;
 mod rail;
 
-pub use channel::{fresh_for, uncertain};
+pub use channel::{fresh_for, is_plausible, uncertain};
 pub use parts::{CapacitorWatch, PartWatch};
 pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches};
 
