@@ -26,6 +26,8 @@ pub struct Figures {
     pub unloaded: Vec<PartFigures>,
     /// Each measured rail that can be projected: how far it lies outside the band from full to idle, V.
     pub apart: Vec<PartFigures>,
+    /// Each limit on a rail that can be projected: what the tide table says of the next hours.
+    pub ahead: Vec<AheadFigures>,
 }
 
 /// A figure of a supply's parts that follows mains, against its own limit.
@@ -44,6 +46,25 @@ pub struct PartFigures {
     /// Whether it has no meaning now: the amplifier is proved to be off.
     pub suppressed: bool,
     /// What else there is to say.
+    pub note: String,
+}
+
+/// How high one rail may come within the next hours, against its setpoint.
+#[derive(Clone, Debug, PartialEq, serde::Serialize)]
+pub struct AheadFigures {
+    /// The rail, as [`RailFigures::subject`] names it.
+    pub subject: String,
+    /// The loading that the limit is judged at.
+    pub loading: Loading,
+    /// The rail at the highest mains that the tide table's band reaches; `None` without a table, or with an old one.
+    pub rail: Option<Uncertain>,
+    /// That mains, V.
+    pub mains_v: Option<f64>,
+    /// The limit less the projection's guard band, V.
+    pub setpoint_v: f64,
+    /// The limit, V.
+    pub limit_v: f64,
+    /// From when on it's expected, if it is.
     pub note: String,
 }
 

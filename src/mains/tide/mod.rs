@@ -32,6 +32,9 @@ const DAY: usize = 144;
 /// Rows of 24 hours that a forecast looks back over, at most.
 const MOST_ROWS: usize = 84;
 
+/// How far back a forecast looks, at most.
+pub const HISTORY: Duration = Duration::from_secs(MOST_ROWS as u64 * 86_400);
+
 /// Rows of 24 hours that a forecast needs, at least.
 pub const FEWEST_ROWS: usize = 7;
 
@@ -101,6 +104,9 @@ pub fn forecast(
     let issued_at = Interval::start_of(as_of, INTERVAL);
     let history = History::new(intervals, issued_at, time_zone)?;
     let coming = (horizon.as_millis() / INTERVAL.as_millis()) as usize;
+    if coming == 0 {
+        return Ok(TideTable { issued_at, rows: history.rows(), steps: Vec::new() });
+    }
     let wall: Vec<_> = (0..coming).map(|k| history::wall(after(issued_at, k), time_zone)).collect();
     let shape = shape::Shape::of(&history);
     let left = shape.without(&history);
@@ -132,3 +138,6 @@ fn kernel(width: f64) -> Vec<(isize, f64)> {
 fn fading(age: usize, half_life: f64) -> f64 {
     0.5f64.powf(age as f64 / half_life)
 }
+
+#[cfg(test)]
+mod tests;
