@@ -3,7 +3,7 @@
 
 use std::time::Duration;
 
-use super::{Facts, Figures, PartFigures, Priority, RailFigures, Side};
+use super::{AheadFigures, Facts, Figures, PartFigures, Priority, RailFigures, Side};
 use crate::supply::Loading;
 
 /// One row: what is watched for, and how.
@@ -153,6 +153,22 @@ pub const CONDITIONS: &[Condition] = &[
         judge: |figures| parts(&figures.apart, "V", ""),
     },
     Condition {
+        name: "rail-ahead",
+        meaning: "by the tide table a rail may pass its setpoint within the next six hours: the upper edge of its 90 % \
+                  band does",
+        priority: Priority::Low,
+        side: Side::Over,
+        deadband: 2.0,
+        unit: "V",
+        on_delay: seconds(0),
+        off_delay: seconds(1_800),
+        advice: "Switch off before then, and leave it off until the mains has come down. A tap is changed only \
+                 unplugged, discharged and by someone qualified, and never for one evening, since it starves the \
+                 amplifier at low mains.",
+        set_in: "[[amplifier.limit]] max_v, [site] guard_band",
+        judge: |figures| figures.ahead.iter().map(judge_ahead).collect(),
+    },
+    Condition {
         name: "logger-silent",
         meaning: "no good line has come from a logger for too long: nothing is being watched",
         priority: Priority::Medium,
@@ -219,6 +235,28 @@ fn judge_rail(rail: &RailFigures, mains_v: Option<f64>) -> Option<Judged> {
             note: String::new(),
         },
     })
+}
+
+/// An amplifier that is off now may be meant for tonight, so nothing suppresses this.
+fn judge_ahead(ahead: &AheadFigures) -> Judged {
+    Judged {
+        subject: ahead.subject.clone(),
+        value: ahead.rail.map(|rail| rail.volts),
+        setpoint: ahead.setpoint_v,
+        suppressed: false,
+        facts: Facts {
+            value: ahead.rail.map(|rail| rail.volts),
+            value_u: ahead.rail.map(|rail| rail.u),
+            setpoint: Some(ahead.setpoint_v),
+            limit: Some(ahead.limit_v),
+            unit: "V".to_owned(),
+            mains_v: ahead.mains_v,
+            source: "forecast".to_owned(),
+            loading: ahead.loading.word().to_owned(),
+            proved_on: None,
+            note: ahead.note.clone(),
+        },
+    }
 }
 
 /// Judges the figures of parts as they stand.

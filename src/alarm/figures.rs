@@ -28,6 +28,8 @@ pub struct Figures {
     pub room: Option<RoomFigures>,
     /// Each measured rail that can be projected: how far it lies outside the band from full to idle, V.
     pub apart: Vec<PartFigures>,
+    /// Each limit on a rail that can be projected: what the tide table says of the next hours.
+    pub ahead: Vec<AheadFigures>,
 }
 
 /// A figure of a supply's parts that follows mains, against its own limit.
@@ -68,6 +70,25 @@ impl RoomFigures {
         let free = self.free_bytes.saturating_sub(Self::NONE_LEFT) as f64;
         free / self.bytes_per_day.unwrap_or(Self::NONE_LEFT as f64).max(1.0)
     }
+}
+
+/// How high one rail may come within the next hours, against its setpoint.
+#[derive(Clone, Debug, PartialEq, serde::Serialize)]
+pub struct AheadFigures {
+    /// The rail, as [`RailFigures::subject`] names it.
+    pub subject: String,
+    /// The loading that the limit is judged at.
+    pub loading: Loading,
+    /// The rail at the highest mains that the tide table's band reaches; `None` without a table, or with an old one.
+    pub rail: Option<Uncertain>,
+    /// That mains, V.
+    pub mains_v: Option<f64>,
+    /// The limit less the projection's guard band, V.
+    pub setpoint_v: f64,
+    /// The limit, V.
+    pub limit_v: f64,
+    /// From when on it's expected, if it is.
+    pub note: String,
 }
 
 /// How one logger does.

@@ -54,7 +54,9 @@ pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
 pub(super) fn fits(site: &Site) -> anyhow::Result<Vec<Option<RecordedFit>>> {
     let store = match Store::open_read_only(&site.store.path) {
         Ok(store) => store,
-        Err(StoreError::Missing { .. } | StoreError::NoFolder { .. }) => return Ok(vec![None; site.amplifiers.len()]),
+        Err(StoreError::Missing { .. } | StoreError::NoFolder { .. }) => {
+            return Ok(vec![None; site.amplifiers.len()]);
+        }
         Err(other) => return Err(other.into()),
     };
     let newest = |amplifier: &Amplifier| {
@@ -66,7 +68,12 @@ pub(super) fn fits(site: &Site) -> anyhow::Result<Vec<Option<RecordedFit>>> {
 /// What each amplifier's rails are projected by.
 pub(super) fn projections(site: &Site) -> anyhow::Result<Vec<Projecting>> {
     let fits = fits(site)?;
-    Ok(site.amplifiers.iter().zip(&fits).map(|(amplifier, fit)| projecting(amplifier, fit.as_ref())).collect())
+    Ok(site
+        .amplifiers
+        .iter()
+        .zip(&fits)
+        .map(|(amplifier, fit)| projecting(amplifier, fit.as_ref()))
+        .collect())
 }
 
 /// Every limit of the site with its projection.

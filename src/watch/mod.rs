@@ -4,6 +4,7 @@
 //! Pure: the daemon, the demo, a year's replay and a test at a desk all drive the same [`Watch`]. It decides in
 //! memory; whoever drives it commits what it [`Decided`] before telling anybody.
 
+mod ahead;
 mod channel;
 mod faults;
 mod findings;
@@ -12,6 +13,7 @@ mod parts;
 mod projecting;
 mod rail;
 
+pub use ahead::LOOK_AHEAD;
 pub use channel::{fresh_for, is_plausible, uncertain};
 pub use findings::findings;
 pub use parts::{CapacitorWatch, PartWatch};
@@ -25,10 +27,12 @@ use crate::alarm::{
     RoomFigures, State,
 };
 use crate::config::Site;
+use crate::mains::TideTable;
 use crate::quantity::{Moment, Mono};
 use crate::reading::{ChannelId, Reading, Stamp};
 use crate::supply::Projector;
 
+use ahead::Ahead;
 use channel::WatchedChannel;
 use ledger::Ledger;
 
@@ -76,6 +80,8 @@ pub struct Watch {
     rails: Vec<RailWatch>,
     parts: Vec<PartWatch>,
     room: Option<RoomFigures>,
+    ahead: Ahead,
+    zone: chrono_tz::Tz,
     ledger: Ledger,
 }
 
@@ -120,11 +126,14 @@ impl Watch {
                 watched
             })
             .collect();
+        let rails = rail_watches(site, projectors);
         Watch {
             mains_channel: mains_channel(site),
             loggers,
             channels,
-            rails: rail_watches(site, projectors),
+            ahead: Ahead::new(&rails, None, site.time_zone, now.mono),
+            zone: site.time_zone,
+            rails,
             parts: part_watches(site, projectors),
             room: None,
             ledger: Ledger::new(site, restored),
@@ -153,6 +162,12 @@ impl Watch {
     /// Learns how much room there is for the record.
     pub fn set_room(&mut self, room: RoomFigures) {
         self.room = Some(room);
+    }
+
+    /// Learns what the tide table says, at an interval's end; `None` where there can be none. It's judged from the
+    /// next tick on.
+    pub fn forecast(&mut self, table: Option<&TideTable>, now: Mono) {
+        self.ahead = Ahead::new(&self.rails, table, self.zone, now);
     }
 
     /// Lets time pass: delays run out, figures grow old, silence is noticed.
@@ -193,6 +208,7 @@ impl Watch {
                 .collect(),
             rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
             room: self.room,
+            ahead: self.ahead.figures(now).collect(),
             ..Figures::default()
         };
         for part in &self.parts {
