@@ -16,6 +16,7 @@ mod simulate;
 mod site;
 mod stop;
 mod stretch;
+mod week;
 
 use std::io::{self, Write};
 use std::path::PathBuf;
@@ -53,6 +54,8 @@ enum Command {
     Now(now::Now),
     /// Lists alarms, or acknowledges one.
     Alarm(alarm::Alarm),
+    /// Gives a week of evidence against the supply rules and the amplifiers' limits.
+    Week(week::WeekCommand),
     /// Gives readings, intervals or the alarms' journal out, or a consistent copy of the record.
     Export(export::Export),
     /// Takes another recorder's readings into the record.
@@ -84,6 +87,7 @@ pub fn main() -> ExitCode {
         Command::Listen(listen) => listen.run(config),
         Command::Now(now) => now.run(config),
         Command::Alarm(alarm) => alarm.run(config),
+        Command::Week(week) => week.run(config),
         Command::Export(export) => export.run(config),
         Command::Import(import) => import.run(config),
         Command::Simulate(simulate) => simulate.run(),

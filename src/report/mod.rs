@@ -4,11 +4,13 @@
 //! Pure: everything is written into a given writer; no clock, no file, no socket.
 
 mod alarms;
+pub mod chart;
 pub mod export;
 mod notice;
 mod standing;
 mod time;
 mod understood;
+pub mod week;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
