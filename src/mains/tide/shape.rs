@@ -17,9 +17,6 @@ struct Pass {
 const SLOW: Pass = Pass { half_life: 20.0, width: 0.6, other_kind: 0.4 };
 const QUICK: Pass = Pass { half_life: 2.5, width: 3.0, other_kind: 0.3 };
 
-/// A row's deviations are drawn in to this many times their usual size, so that one odd day bends no habit.
-const DRAWN_IN: f64 = 6.0;
-
 /// The habit, V, and the level that it stands on.
 #[derive(Debug)]
 pub(super) struct Shape {
@@ -67,16 +64,9 @@ fn base(history: &History) -> f64 {
     sum / weights
 }
 
-/// Each value less the mean of its row, drawn in.
+/// Each value less the mean of its row.
 fn deviations(history: &History) -> Vec<f64> {
-    let mut all: Vec<f64> =
-        history.volts.iter().enumerate().map(|(i, v)| v - history.row_mean[i / DAY]).collect();
-    let mut sizes: Vec<f64> = all.iter().filter(|d| d.is_finite()).map(|d| d.abs()).collect();
-    let usual = super::history::middle(&mut sizes).unwrap_or(0.0);
-    for d in &mut all {
-        *d = d.clamp(-DRAWN_IN * usual, DRAWN_IN * usual);
-    }
-    all
+    history.volts.iter().enumerate().map(|(i, v)| v - history.row_mean[i / DAY]).collect()
 }
 
 /// Weighted mean by time of day, over rows and over neighbouring times; the day closes on itself.

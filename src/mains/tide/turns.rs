@@ -62,6 +62,9 @@ pub fn turns(steps: &[TideStep]) -> Vec<Turn> {
             (seeking, high) = (Some(TurnKind::High), *step);
         }
     }
-    found.retain(|turn| turn.step.at != first.at);
+    // What the table starts with is a turn only if it came there by more than a ripple.
+    if found.first().is_some_and(|turn| (turn.step.median_v - first.median_v).abs() < LEAST_V) {
+        found.remove(0);
+    }
     found
 }
