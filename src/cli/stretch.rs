@@ -78,6 +78,11 @@ fn week_from(monday: NaiveDate, zone: Tz) -> Stretch {
     Stretch { from: midnight(monday, zone), to: midnight(monday + Days::new(7), zone) }
 }
 
+/// One moment by RFC 3339, or in the site's zone; a day alone is its beginning.
+pub(super) fn instant(text: &str, zone: Tz) -> anyhow::Result<Utc> {
+    time(text, zone, Edge::Start)
+}
+
 /// A time by RFC 3339, or in the site's zone.
 fn time(text: &str, zone: Tz, edge: Edge) -> anyhow::Result<Utc> {
     if let Ok(exact) = DateTime::parse_from_rfc3339(text) {

@@ -6,12 +6,14 @@
 mod alarms;
 pub mod export;
 mod notice;
+mod profile;
 mod standing;
 mod time;
 mod understood;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
+pub use profile::{Known, Profile, profile_csv, profile_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;
