@@ -70,18 +70,192 @@ fn evening() -> Profile {
 
 #[test]
 fn the_json_holds_what_programs_were_promised() {
-    insta::assert_snapshot!(serde_json::to_string_pretty(&evening()).unwrap(), @r#""#);
+    insta::assert_snapshot!(serde_json::to_string_pretty(&evening()).unwrap(), @r#"
+    {
+      "from": "2026-12-01T18:00:00+01:00",
+      "to": "2026-12-01T18:30:00+01:00",
+      "time_zone": "Europe/Berlin",
+      "intervals": 3,
+      "mains": {
+        "working": [
+          {
+            "at": "18:00",
+            "mean_v": 233.0,
+            "low_v": 233.0,
+            "high_v": 233.0,
+            "count": 1
+          },
+          {
+            "at": "18:10",
+            "mean_v": 235.0,
+            "low_v": 235.0,
+            "high_v": 235.0,
+            "count": 1
+          },
+          {
+            "at": "18:20",
+            "mean_v": 237.0,
+            "low_v": 237.0,
+            "high_v": 237.0,
+            "count": 1
+          }
+        ],
+        "weekend": []
+      },
+      "highest": [
+        {
+          "at": "2026-12-01T18:15:00+01:00",
+          "rms_v": 236.5
+        },
+        {
+          "at": "2026-12-01T18:00:00+01:00",
+          "rms_v": 234.5
+        }
+      ],
+      "rails": [
+        {
+          "amplifier": "hall",
+          "node": "reservoir",
+          "loading": "idle",
+          "u_v": 11.214098626730562,
+          "limit_v": 480.0,
+          "setpoint_v": 468.6325383243961,
+          "working": [
+            {
+              "at": "18:00",
+              "mean_v": 478.7090909090909,
+              "low_v": 478.7090909090909,
+              "high_v": 478.7090909090909,
+              "count": 1
+            },
+            {
+              "at": "18:10",
+              "mean_v": 482.8181818181818,
+              "low_v": 482.8181818181818,
+              "high_v": 482.8181818181818,
+              "count": 1
+            },
+            {
+              "at": "18:20",
+              "mean_v": 486.92727272727274,
+              "low_v": 486.92727272727274,
+              "high_v": 486.92727272727274,
+              "count": 1
+            }
+          ],
+          "weekend": [],
+          "days": [
+            {
+              "date": "2026-12-01",
+              "recorded_h": 0.5,
+              "over_limit_h": 0.3333333333333333,
+              "over_setpoint_h": 0.5
+            }
+          ]
+        }
+      ],
+      "as_of": "2026-12-01T18:30:00+01:00",
+      "no_tide": null,
+      "tide": [
+        {
+          "at": "2026-12-01T18:30:00+01:00",
+          "low_v": 234.0,
+          "median_v": 236.0,
+          "high_v": 239.0
+        },
+        {
+          "at": "2026-12-01T18:40:00+01:00",
+          "low_v": 236.5,
+          "median_v": 238.5,
+          "high_v": 241.5
+        },
+        {
+          "at": "2026-12-01T18:50:00+01:00",
+          "low_v": 233.0,
+          "median_v": 235.0,
+          "high_v": 238.0
+        }
+      ],
+      "turns": [
+        {
+          "at": "2026-12-01T18:40:00+01:00",
+          "kind": "high",
+          "mains_v": 238.5,
+          "low_v": 236.5,
+          "high_v": 241.5,
+          "rails": [
+            {
+              "amplifier": "hall",
+              "node": "reservoir",
+              "loading": "idle",
+              "rail_v": 490.0090909090909,
+              "low_v": 485.9,
+              "high_v": 496.1727272727273,
+              "u_v": 12.123526328217407
+            }
+          ]
+        }
+      ]
+    }
+    "#);
 }
 
 #[test]
 fn people_read_the_day_the_rail_and_the_turns() {
-    insta::assert_snapshot!(text(&evening()), @r#""#);
+    insta::assert_snapshot!(text(&evening()), @r#"
+    Mains by time of day, Tue 1 Dec 18:00:00 to Tue 1 Dec 18:30:00 (Europe/Berlin), V: mean and the band of 5 to 95 % of the 10-minute values
+
+    hour   working days             weekends
+    00:00  -                        -
+    01:00  -                        -
+    02:00  -                        -
+    03:00  -                        -
+    04:00  -                        -
+    05:00  -                        -
+    06:00  -                        -
+    07:00  -                        -
+    08:00  -                        -
+    09:00  -                        -
+    10:00  -                        -
+    11:00  -                        -
+    12:00  -                        -
+    13:00  -                        -
+    14:00  -                        -
+    15:00  -                        -
+    16:00  -                        -
+    17:00  -                        -
+    18:00  235.0  (233.2 to 236.8)  -
+    19:00  -                        -
+    20:00  -                        -
+    21:00  -                        -
+    22:00  -                        -
+    23:00  -                        -
+
+    The highest quarter hours of the last seven days:
+      Tue 1 Dec 18:15:00  236.5 V
+      Tue 1 Dec 18:00:00  234.5 V
+
+    Rail reservoir of hall (idle) would stand highest at about 18:20: 487 V, 5 to 95 % 487 to 487 V, each ± 11 V.
+      above its limit of 480 V: 66.7 % of the recorded time; above its setpoint of 469 V: 100.0 %
+      longest on 2026-12-01: 0.3 h above the limit
+
+    Tide table as of Tue 1 Dec 18:30:00
+      high  Tue 1 Dec 18:40:00  mains 238.5 V (236.5 to 241.5 V)
+            hall.reservoir idle would stand at 490 V (486 to 496 V, each ± 12 V)
+      Bands: nine of ten 10-minute values are expected within them; seconds go further.
+    railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
+    "#);
 }
 
 #[test]
 fn with_nothing_recorded_and_too_little_for_a_table_it_says_so() {
     let empty = profile(&[], &Err(NoForecast::TooShort { rows: 2 }));
-    insta::assert_snapshot!(text(&empty), @r#""#);
+    insta::assert_snapshot!(text(&empty), @r#"
+    No mains is recorded between Tue 1 Dec 18:00:00 and Tue 1 Dec 18:30:00; choose another stretch, or look whether the logger is running.
+
+    Tide table as of Tue 1 Dec 18:30:00
+      None: the tide table needs 7 days of 24 hours that are at least half recorded, and there are 2; it comes by itself when they are there.
+    "#);
     assert_eq!(empty.tide.len(), 0);
 }
 

@@ -29,7 +29,7 @@ fn days(profile: &Profile, out: &mut impl Write) -> fmt::Result {
         profile.to.people(),
         profile.time_zone
     )?;
-    writeln!(out, "hour   working days           weekends")?;
+    writeln!(out, "hour   working days             weekends")?;
     let said = |slots: &[Slot], minute: u32| match slots.iter().find(|s| s.minute == minute) {
         Some(s) => format!("{:5.1}  ({:5.1} to {:5.1})", s.mean_v, s.low_v, s.high_v),
         None => "-".to_owned(),
@@ -37,7 +37,7 @@ fn days(profile: &Profile, out: &mut impl Write) -> fmt::Result {
     for minute in (0..24).map(|hour| 60 * hour) {
         let working = said(&profile.by_hour.working, minute);
         let weekend = said(&profile.by_hour.weekend, minute);
-        writeln!(out, "{}  {working:22}  {weekend}", clock(minute))?;
+        writeln!(out, "{}  {working:23}  {weekend}", clock(minute))?;
     }
     if !profile.highest.is_empty() {
         writeln!(out, "\nThe highest quarter hours of the last seven days:")?;
