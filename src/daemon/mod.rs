@@ -17,12 +17,12 @@ use std::time::Duration;
 use tokio::sync::mpsc;
 
 use crate::clock::{Clock, TimeBase};
-use crate::config::Site;
+use crate::config::{Amplifier, Site};
 use crate::logger::{self, PortHandle};
 use crate::notice::{NoticeError, Waiting, Worker};
 use crate::store::{self, Batch, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
-use crate::watch::{self, Watch, projector};
+use crate::watch::{self, Watch, projecting, valid_fit};
 
 pub use alone::apply_alone;
 
@@ -67,7 +67,7 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let ids = store.register_channels(&channel_specs(site))?;
     let (remembered, restored) = remembered(&store)?;
     let now = clock.now();
-    let watch = Watch::new(site, &ids, &projectors(site), remembered, now);
+    let watch = Watch::new(site, &ids, &projectors(site, &store)?, remembered, now);
     let time = TimeBase::new(now, restored.newest);
     let (early, placed) = Early::begin(&clock, &time, &restored);
     store.commit(&Batch { placed, ..Batch::default() })?;
@@ -134,8 +134,17 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     Ok(())
 }
 
-fn projectors(site: &Site) -> Vec<Option<Projector>> {
-    site.amplifiers.iter().map(projector).collect()
+/// What each amplifier's rails are projected by: its newest fit that holds, its circuit, or its measured pair.
+fn projectors(site: &Site, store: &Store) -> Result<Vec<Option<Projector>>, StoreError> {
+    let of = |amplifier: &Amplifier| {
+        let fits = store.fits(&amplifier.name)?;
+        let projecting = projecting(amplifier, valid_fit(amplifier, &fits, site.time_zone));
+        if let Some(trouble) = projecting.trouble {
+            tracing::warn!("{trouble}");
+        }
+        Ok(projecting.projector)
+    };
+    site.amplifiers.iter().map(of).collect()
 }
 
 fn stop_ports(ports: Vec<PortHandle>) {

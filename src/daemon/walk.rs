@@ -115,6 +115,11 @@ impl Walk {
         {
             self.log_store_failure(&error, now.mono);
         }
+        match self.upkeep.room(&self.store, now) {
+            Ok(Some(room)) => self.watch.set_room(room),
+            Ok(None) => {}
+            Err(error) => self.log_store_failure(&error, now.mono),
+        }
         self.look_ahead(now);
         for (what, times) in self.hush.overdue(now.mono) {
             tracing::warn!("{what} ({times} times more)");
@@ -131,11 +136,12 @@ impl Walk {
                 }
                 self.watch.forecast(table.ok().as_ref(), now.mono);
             }
-            Some(Err(error)) => {
-                if self.hush.note("the record can't be read for the tide table", now.mono).is_some() {
-                    tracing::warn!("there is no tide table this time: {error}");
-                }
+            Some(Err(error))
+                if self.hush.note("the record can't be read for the tide table", now.mono).is_some() =>
+            {
+                tracing::warn!("there is no tide table this time: {error}");
             }
+            Some(Err(_)) => {}
         }
     }
 
@@ -352,7 +358,13 @@ webhook = "http://127.0.0.1:9/"
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
             let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
-            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site), remembered, clock.now());
+            let watch = Watch::new(
+                &site,
+                &ids,
+                &crate::daemon::projectors(&site, &store).unwrap(),
+                remembered,
+                clock.now(),
+            );
             let time = TimeBase::new(clock.now(), restored.newest);
             let (early, placed) = Early::begin(&clock, &time, &restored);
             store.commit(&crate::store::Batch { placed, ..Default::default() }).unwrap();

@@ -126,6 +126,7 @@ fn standing(facts: &Facts, tense: Tense) -> Option<String> {
     let verb = match (facts.unit.as_str(), facts.source.as_str(), tense) {
         ("s", _, Tense::Now) => "has lasted",
         ("s", _, Tense::Past) => "lasted",
+        ("days", _, _) => "has room left for",
         (_, "forecast", Tense::Now) => "may come to",
         (_, "forecast", Tense::Past) => "was expected to come to at most",
         (_, "projected", _) if facts.proved_on == Some(true) => "is taken to stand at",

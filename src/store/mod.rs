@@ -13,6 +13,8 @@ mod channels;
 mod columns;
 mod copy;
 mod error;
+mod fits;
+mod growth;
 mod hours;
 mod intervals;
 mod lock;

@@ -1,5 +1,8 @@
 //! The rail curve: mains volts to rail volts for one node and loading, with its uncertainty.
 
+use std::sync::Arc;
+
+use super::monotone::MonotoneCubic;
 use crate::quantity::{Uncertain, rectangular_u};
 
 /// One reading of a rail against mains: the short way of stating a supply.
@@ -28,6 +31,39 @@ const CREST_HALF_WIDTH: f64 = 0.01;
 pub enum RailCurve {
     /// In proportion to mains through one measured pair.
     Proportional(Measured),
+    /// Through solutions of the supply's circuit.
+    Solved(Arc<SolvedCurve>),
+}
+
+/// A rail solved at a grid of mains voltages, with its expanded uncertainty at each.
+#[derive(Clone, Debug, PartialEq)]
+pub struct SolvedCurve {
+    rail: MonotoneCubic,
+    model_u: MonotoneCubic,
+}
+
+impl SolvedCurve {
+    /// A curve through `rail_v` with expanded uncertainty `u_v` (k = 2) at `mains_v`, all V. `None` where these are
+    /// fewer than two, `mains_v` doesn't rise, or a figure isn't finite.
+    pub fn new(mains_v: Vec<f64>, rail_v: Vec<f64>, u_v: Vec<f64>) -> Option<Self> {
+        SolvedCurve::through(mains_v.clone(), rail_v, mains_v, u_v)
+    }
+
+    /// As [`SolvedCurve::new`], with the uncertainty at mains of its own.
+    pub(super) fn through(
+        mains_v: Vec<f64>,
+        rail_v: Vec<f64>,
+        u_mains_v: Vec<f64>,
+        u_v: Vec<f64>,
+    ) -> Option<Self> {
+        let model_u = MonotoneCubic::new(u_mains_v, u_v)?;
+        Some(SolvedCurve { rail: MonotoneCubic::new(mains_v, rail_v)?, model_u })
+    }
+
+    /// The mains between which it was solved, V; beyond them it goes on along its end's tangent.
+    pub fn span_v(&self) -> (f64, f64) {
+        self.rail.span()
+    }
 }
 
 impl RailCurve {
@@ -35,13 +71,15 @@ impl RailCurve {
     pub fn rail_v(&self, mains_v: f64) -> f64 {
         match self {
             RailCurve::Proportional(pair) => pair.rail_v * mains_v / pair.mains_v,
+            RailCurve::Solved(curve) => curve.rail.at(mains_v).max(0.0),
         }
     }
 
     /// dRail/dMains at `mains_v`.
-    pub fn slope(&self, _mains_v: f64) -> f64 {
+    pub fn slope(&self, mains_v: f64) -> f64 {
         match self {
             RailCurve::Proportional(pair) => pair.rail_v / pair.mains_v,
+            RailCurve::Solved(curve) => curve.rail.slope_at(mains_v),
         }
     }
 
@@ -59,6 +97,7 @@ impl RailCurve {
                     rectangular_u(rail_v * SLOPE_HALF_WIDTH * distance),
                 ])
             }
+            RailCurve::Solved(curve) => curve.model_u.at(mains_v).max(0.0),
         }
     }
 
@@ -69,13 +108,15 @@ impl RailCurve {
         Uncertain::new(self.rail_v(mains.volts), Uncertain::combine([through, self.model_u(mains.volts)]))
     }
 
-    /// The mains at which the rail stands at `rail_v`, V; `None` where no mains within a factor of two does it.
+    /// The mains at which the rail stands at `rail_v`, V; `None` where no mains within a factor of two of the measured
+    /// pair's does it, or none between which the supply was solved.
     pub fn mains_for(&self, rail_v: f64) -> Option<f64> {
         match self {
             RailCurve::Proportional(pair) => {
                 let mains_v = rail_v * pair.mains_v / pair.rail_v;
                 (mains_v > pair.mains_v / 2.0 && mains_v < pair.mains_v * 2.0).then_some(mains_v)
             }
+            RailCurve::Solved(curve) => curve.rail.backwards(rail_v),
         }
     }
 }

@@ -5,12 +5,41 @@
 
 mod circuit;
 mod curve;
+mod device;
+mod discharge;
+mod doubt;
+mod findings;
+pub mod fit;
+mod measures;
+mod mesh;
+mod monotone;
+mod network;
+mod paths;
+mod period;
+mod projection;
+#[cfg(test)]
+mod published;
+mod shooting;
+mod stage;
+mod steady;
+#[cfg(test)]
+mod test_circuits;
+mod wave;
 
 pub use circuit::{
     Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, Loading, MainsWave, RectifierCircuit,
     Section, SeriesPart, Transformer, Winding,
 };
-pub use curve::{Measured, RailCurve};
+pub use curve::{Measured, RailCurve, SolvedCurve};
+pub use discharge::{Discharge, SAFE_V, discharge};
+pub use findings::{
+    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
+};
+pub use projection::Grid;
+pub use steady::{
+    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
+    steady_state, sweep,
+};
 
 use crate::quantity::Uncertain;
 

@@ -6,21 +6,27 @@
 
 mod ahead;
 mod channel;
+mod faults;
+mod findings;
 mod ledger;
 mod parts;
+mod projecting;
 mod rail;
 
 pub use ahead::LOOK_AHEAD;
 pub use channel::{fresh_for, is_plausible, uncertain};
+pub use findings::findings;
 pub use parts::{CapacitorWatch, PartWatch};
+pub use projecting::{Projecting, projecting, valid_fit};
 pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches};
 
 use std::time::Duration;
 
 use crate::alarm::{
-    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction, State,
+    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction,
+    RoomFigures, State,
 };
-use crate::config::{Amplifier, Site};
+use crate::config::Site;
 use crate::mains::TideTable;
 use crate::quantity::{Moment, Mono};
 use crate::reading::{ChannelId, Reading, Stamp};
@@ -73,6 +79,7 @@ pub struct Watch {
     channels: Vec<WatchedChannel>,
     rails: Vec<RailWatch>,
     parts: Vec<PartWatch>,
+    room: Option<RoomFigures>,
     ahead: Ahead,
     zone: chrono_tz::Tz,
     ledger: Ledger,
@@ -85,12 +92,6 @@ struct WatchedLogger {
     sample_period: Duration,
     last_line: Mono,
     disconnected: Option<String>,
-}
-
-/// The projector of an amplifier from its config alone: the short way, if that is stated.
-pub fn projector(amplifier: &Amplifier) -> Option<Projector> {
-    let measured = amplifier.measured.as_ref()?;
-    Some(Projector::from_measured(&measured.node, measured.loading, measured.pair.clone()))
 }
 
 impl Watch {
@@ -134,6 +135,7 @@ impl Watch {
             zone: site.time_zone,
             rails,
             parts: part_watches(site, projectors),
+            room: None,
             ledger: Ledger::new(site, restored),
         }
     }
@@ -155,6 +157,11 @@ impl Watch {
     /// Learns that a logger's port is not open, and why.
     pub fn disconnected(&mut self, logger: usize, why: String) {
         self.loggers[logger].disconnected = Some(why);
+    }
+
+    /// Learns how much room there is for the record.
+    pub fn set_room(&mut self, room: RoomFigures) {
+        self.room = Some(room);
     }
 
     /// Learns what the tide table says, at an interval's end; `None` where there can be none. It's judged from the
@@ -200,6 +207,7 @@ impl Watch {
                 })
                 .collect(),
             rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
+            room: self.room,
             ahead: self.ahead.figures(now).collect(),
             ..Figures::default()
         };
