@@ -12,12 +12,13 @@ use crate::clock::Clock;
 use crate::config::Site;
 use crate::mains::{HISTORY, INTERVAL, Interval, forecast, intervals_of};
 use crate::quantity::Utc;
-use crate::report::{Known, Profile as Report, profile_csv, profile_text};
+use crate::report::{Known, Profile as Report, profile_csv, profile_html, profile_text};
 use crate::store::{Store, StoreError, StoredChannel};
-use crate::watch::{mains_channel, projector};
+use crate::watch::mains_channel;
 
 /// Looked back over where no stretch is asked for.
 const FOUR_WEEKS: Duration = Duration::from_secs(28 * 86_400);
+const DAY: Duration = Duration::from_secs(86_400);
 const WEEK: Duration = Duration::from_secs(7 * 86_400);
 const QUARTER: Duration = Duration::from_secs(900);
 
@@ -32,9 +33,21 @@ pub(super) struct Profile {
     /// How many hours the tide table looks ahead.
     #[arg(long, value_name = "HOURS", default_value_t = 48, value_parser = clap::value_parser!(u64).range(1..=48))]
     hours: u64,
+    /// Which drawing `--format svg` gives.
+    #[arg(long, value_enum, default_value_t)]
+    chart: Chart,
     /// How to print.
     #[arg(long, value_enum, default_value_t)]
     format: ProfileFormat,
+}
+
+#[derive(Clone, Copy, Debug, Default, ValueEnum)]
+enum Chart {
+    /// The last 24 hours, and what is expected.
+    #[default]
+    Tide,
+    /// Mains by time of day.
+    Day,
 }
 
 #[derive(Clone, Copy, Debug, Default, ValueEnum)]
@@ -46,6 +59,10 @@ enum ProfileFormat {
     Json,
     /// The days by time of day, a row each.
     Csv,
+    /// One file for a browser or a printer, which needs nothing else.
+    Html,
+    /// One drawing: the last 24 hours and the tide table, or the day (`--chart`).
+    Svg,
 }
 
 impl Profile {
@@ -69,14 +86,31 @@ impl Profile {
         };
         let issued_at = Interval::start_of(as_of, INTERVAL);
         let before = known(issued_at - HISTORY, issued_at)?;
+        let day_before = before.partition_point(|i| i.start < issued_at - DAY);
         let tide = forecast(&before, as_of, Duration::from_secs(3600 * self.hours), site.time_zone);
-        let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
-        let known =
-            Known { from: stretch.from, to, intervals: &intervals, quarters: &quarters, as_of, tide: &tide };
+        let projectors: Vec<_> = super::site::projections(&site)?.into_iter().map(|p| p.projector).collect();
+        let known = Known {
+            from: stretch.from,
+            to,
+            before: &before[day_before..],
+            intervals: &intervals,
+            quarters: &quarters,
+            as_of,
+            tide: &tide,
+        };
         let profile = Report::new(&site, &projectors, &known);
         match self.format {
             ProfileFormat::Json => super::print_json(&profile),
             ProfileFormat::Csv => Ok(profile_csv(&profile, io::stdout().lock())?),
+            ProfileFormat::Html => {
+                let mut page = String::new();
+                profile_html(&profile, &mut page)?;
+                super::print(&page)
+            }
+            ProfileFormat::Svg => super::print(&match self.chart {
+                Chart::Tide => profile.tide_svg(),
+                Chart::Day => profile.day_svg(),
+            }),
             ProfileFormat::Text => {
                 let mut text = String::new();
                 profile_text(&profile, &mut text)?;

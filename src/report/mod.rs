@@ -4,6 +4,7 @@
 //! Pure: everything is written into a given writer; no clock, no file, no socket.
 
 mod alarms;
+pub mod chart;
 pub mod export;
 mod notice;
 mod profile;
@@ -13,7 +14,7 @@ mod understood;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
-pub use profile::{Known, Profile, profile_csv, profile_text};
+pub use profile::{Known, Profile, profile_csv, profile_html, profile_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;

@@ -40,7 +40,11 @@ pub(super) fn ticks(domain: (f64, f64), wanted: usize) -> Vec<f64> {
     }
     let rough = width / wanted.max(1) as f64;
     let power = 10_f64.powf(rough.log10().floor());
-    let step = [1.0, 2.0, 5.0, 10.0].map(|m| m * power).into_iter().find(|step| *step >= rough).unwrap_or(10.0 * power);
+    let step = [1.0, 2.0, 5.0, 10.0]
+        .map(|m| m * power)
+        .into_iter()
+        .find(|step| *step >= rough)
+        .unwrap_or(10.0 * power);
     let first = (low / step).ceil() as i64;
     let last = (high / step).floor() as i64;
     (first..=last).map(|n| n as f64 * step).collect()

@@ -94,9 +94,9 @@ pub fn mains_range<'p>(
 impl TwoScale<'_> {
     /// The drawing as SVG.
     pub fn svg(&self) -> String {
-        let range = self.mains_v.or_else(|| {
-            mains_range(self.recorded.iter().chain(self.expected), self.rail.as_ref())
-        });
+        let range = self
+            .mains_v
+            .or_else(|| mains_range(self.recorded.iter().chain(self.expected), self.rail.as_ref()));
         let mut pen = Pen::begin(self.id, WIDTH, self.height, self.title, &self.description());
         pen.text("", (LEFT, 16.0), "start", self.title);
         let x = Scale::new((self.from.0 as f64, self.to.0 as f64), (LEFT, WIDTH - RIGHT));
@@ -131,7 +131,10 @@ impl TwoScale<'_> {
         if let Some(rail) = &self.rail {
             let at = rail.curve.mains_for(rail.limit_v);
             let at = at.map_or_else(String::new, |v| format!(", reached at {v:.1} V of mains"));
-            text.push(format!("The right-hand scale is {}; its limit is {:.0} V{at}.", rail.name, rail.limit_v));
+            text.push(format!(
+                "The right-hand scale is {}; its limit is {:.0} V{at}.",
+                rail.name, rail.limit_v
+            ));
         }
         text.join(" ")
     }
@@ -158,7 +161,11 @@ impl TwoScale<'_> {
                 pen.line("grid", (here, TOP), (here, self.height - BOTTOM));
                 if here - last_x > 30.0 {
                     // The last midnight of a day is its end.
-                    let name = if at == self.to.0 && local.hour() == 0 { "24".to_owned() } else { local.format("%H").to_string() };
+                    let name = if at == self.to.0 && local.hour() == 0 {
+                        "24".to_owned()
+                    } else {
+                        local.format("%H").to_string()
+                    };
                     pen.text("soft", (here, self.height - 8.0), "middle", &name);
                     last_x = here;
                 }
@@ -188,13 +195,19 @@ impl TwoScale<'_> {
             pen.text("", (right + 7.0, y.at(mains) + 4.0), "start", &tick_text(volts, step));
         }
         pen.text("soft", (WIDTH - 4.0, TOP - 10.0), "end", &format!("{}, V", rail.name));
-        let level = |volts: f64| rail.curve.mains_for(volts).filter(|mains| y.holds(*mains)).map(|mains| y.at(mains));
+        let level =
+            |volts: f64| rail.curve.mains_for(volts).filter(|mains| y.holds(*mains)).map(|mains| y.at(mains));
         if let Some(setpoint) = rail.setpoint_v.and_then(level) {
             pen.line("setpoint", (LEFT, setpoint), (right, setpoint));
         }
         if let Some(limit) = level(rail.limit_v) {
             pen.line("limit", (LEFT, limit), (right, limit));
-            pen.text("limit-name", (LEFT + 4.0, limit - 4.0), "start", &format!("limit {:.0} V", rail.limit_v));
+            pen.text(
+                "limit-name",
+                (LEFT + 4.0, limit - 4.0),
+                "start",
+                &format!("limit {:.0} V", rail.limit_v),
+            );
         }
     }
 

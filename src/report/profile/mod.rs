@@ -1,6 +1,8 @@
 //! The household's day: mains and each rail by time of day, the highest quarter hours, time above the limits, and the
 //! tide table.
 
+mod charts;
+mod html;
 mod text;
 
 use std::time::Duration;
@@ -17,6 +19,7 @@ use crate::quantity::{Uncertain, Utc};
 use crate::supply::{Loading, Projector, RailCurve};
 use crate::watch::rail_watches;
 
+pub use html::profile_html;
 pub use text::{profile_csv, profile_text};
 
 /// How many of the highest quarter hours are named.
@@ -52,6 +55,10 @@ pub struct Profile {
     pub turns: Vec<TurnLine>,
     #[serde(skip)]
     by_hour: DayProfile,
+    #[serde(skip)]
+    by_slot: DayProfile,
+    #[serde(skip)]
+    drawn: charts::Drawn,
 }
 
 /// A value by time of day, working days and weekends apart.
@@ -107,6 +114,8 @@ pub struct RailProfile {
     pub day: DayLines,
     /// Each day's time above limit and setpoint; empty where the rail has no limit.
     pub days: Vec<RailDay>,
+    #[serde(skip)]
+    by_slot: DayProfile,
 }
 
 /// One day of a rail with a limit.
@@ -178,6 +187,8 @@ pub struct Known<'a> {
     pub from: Utc,
     /// Until before when.
     pub to: Utc,
+    /// The 10-minute intervals of the 24 hours before `as_of`, in order, to be drawn before what is expected.
+    pub before: &'a [Interval],
     /// The 10-minute intervals of mains in between, in order.
     pub intervals: &'a [Interval],
     /// The quarter hours of the last week in between.
@@ -188,6 +199,7 @@ pub struct Known<'a> {
     pub tide: &'a Result<TideTable, NoForecast>,
 }
 
+#[derive(Clone, Debug)]
 struct Rail {
     amplifier: String,
     node: String,
@@ -225,19 +237,24 @@ impl Profile {
             high_v: step.high_v,
         };
         let quarter = |i: &Interval| Quarter { at: LocalTime::of(i.start, zone), rms_v: i.rms_v };
+        let rail_profiles = rails.iter().map(|rail| rail.profile(known, zone)).collect();
+        let turns = turns.collect();
+        let mains_day = day_profile(samples(), zone, INTERVAL);
         Profile {
             from: LocalTime::of(known.from, zone),
             to: LocalTime::of(known.to, zone),
             time_zone: zone.name().to_owned(),
             intervals: known.intervals.len(),
-            mains: day_profile(samples(), zone, INTERVAL).into(),
+            mains: mains_day.clone().into(),
             highest: mains::highest(known.quarters, HIGHEST).iter().map(quarter).collect(),
             as_of: LocalTime::of(known.as_of, zone),
             no_tide,
             tide: tide.iter().map(line).collect(),
-            turns: turns.collect(),
-            rails: rails.iter().map(|rail| rail.profile(known, zone)).collect(),
+            turns,
+            rails: rail_profiles,
             by_hour: day_profile(samples(), zone, HOUR),
+            by_slot: mains_day,
+            drawn: charts::Drawn::new(known, zone, rails),
         }
     }
 }
@@ -304,6 +321,7 @@ impl Rail {
                 })
                 .collect()
         });
+        let by_slot = day_profile(samples(), zone, INTERVAL);
         RailProfile {
             amplifier: self.amplifier.clone(),
             node: self.node.clone(),
@@ -311,8 +329,9 @@ impl Rail {
             u_v: mean_v.is_finite().then(|| self.curve.project(Uncertain::new(mean_v, 0.0)).u),
             limit_v: self.limit.map(|l| l.0),
             setpoint_v: self.limit.map(|l| l.1),
-            day: day_profile(samples(), zone, INTERVAL).into(),
+            day: by_slot.clone().into(),
             days,
+            by_slot,
         }
     }
 }

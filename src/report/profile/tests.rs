@@ -53,7 +53,7 @@ fn profile(intervals: &[Interval], tide: &Result<TideTable, NoForecast>) -> Prof
     let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
     let to = Utc(SIX.0 + 1_800_000);
     let quarters = [interval(0, 234.5), interval(15, 236.5)];
-    let known = Known { from: SIX, to, intervals, quarters: &quarters, as_of: to, tide };
+    let known = Known { from: SIX, to, before: intervals, intervals, quarters: &quarters, as_of: to, tide };
     Profile::new(&site, &projectors, &known)
 }
 
