@@ -28,6 +28,11 @@ impl LocalTime {
         self.0.format("%a %-d %b %H:%M:%S").to_string()
     }
 
+    /// For people, where seconds would promise too much: `Tue 1 Dec 20:40`.
+    pub fn to_the_minute(self) -> String {
+        self.0.format("%a %-d %b %H:%M").to_string()
+    }
+
     /// For people who read it elsewhere or later: `18:42:10 CEST on Tue 6 Oct 2026`. The zone's short name tells the
     /// two autumn hours apart.
     pub fn in_full(self) -> String {

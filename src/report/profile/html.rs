@@ -12,7 +12,7 @@ const STYLE: &str = "\
 @media(prefers-color-scheme:dark){:root{--paper:#211d18;--ink:#efe6d6;--soft:#b5a88f;--faint:#4a4235}}\
 @media print{:root{--paper:#fff;--ink:#000;--soft:#444;--faint:#ccc}@page{size:A4;margin:14mm}}\
 body{margin:0 auto;max-width:44rem;padding:1rem;background:var(--paper);color:var(--ink);\
-font:16px/1.45 system-ui,sans-serif}h1{font-size:1.4rem}h2{font-size:1.1rem;margin:1.4rem 0 .4rem}\
+font:16px/1.45 system-ui,sans-serif}h2{break-after:avoid}td{white-space:nowrap}h1{font-size:1.4rem}h2{font-size:1.1rem;margin:1.4rem 0 .4rem}\
 svg{width:100%;height:auto;display:block}figure{margin:.6rem 0;break-inside:avoid}\
 .wide{overflow-x:auto}table{border-collapse:collapse;font-variant-numeric:tabular-nums}\
 th,td{padding:.2rem .7rem .2rem 0;text-align:left;vertical-align:top;border-bottom:1px solid var(--faint)}\
@@ -20,7 +20,7 @@ tr{break-inside:avoid}.soft{color:var(--soft)}";
 
 /// Writes the page.
 pub fn profile_html(profile: &Profile, out: &mut impl Write) -> fmt::Result {
-    let (from, to) = (profile.from.people(), profile.to.people());
+    let (from, to) = (profile.from.to_the_minute(), profile.to.to_the_minute());
     write!(
         out,
         "<!doctype html>\n<html lang=\"en\"><head><meta charset=\"utf-8\">\
@@ -46,7 +46,7 @@ fn tide(profile: &Profile, out: &mut impl Write) -> fmt::Result {
     writeln!(
         out,
         "<h2>Tide table as of {}</h2>\n<figure>{}</figure>",
-        profile.as_of.people(),
+        profile.as_of.to_the_minute(),
         profile.tide_svg()
     )?;
     if let Some(why) = &profile.no_tide {
@@ -74,7 +74,7 @@ fn turn(turn: &TurnLine, out: &mut impl Write) -> fmt::Result {
         out,
         "<tr><td>{}</td><td>{}</td><td>{:.1} ({:.1}–{:.1})</td><td>",
         turn.kind,
-        turn.at.people(),
+        turn.at.to_the_minute(),
         turn.mains_v,
         turn.low_v,
         turn.high_v
@@ -101,7 +101,7 @@ fn highest(profile: &Profile, out: &mut impl Write) -> fmt::Result {
     }
     writeln!(out, "<h2>Highest quarter hours of the last seven days</h2>\n<table>")?;
     for quarter in &profile.highest {
-        writeln!(out, "<tr><td>{}</td><td>{:.1} V</td></tr>", quarter.at.people(), quarter.rms_v)?;
+        writeln!(out, "<tr><td>{}</td><td>{:.1} V</td></tr>", quarter.at.to_the_minute(), quarter.rms_v)?;
     }
     writeln!(out, "</table>")
 }

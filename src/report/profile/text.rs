@@ -12,8 +12,8 @@ pub fn profile_text(profile: &Profile, out: &mut impl Write) -> fmt::Result {
         writeln!(
             out,
             "No mains is recorded between {} and {}; choose another stretch, or look whether the logger is running.",
-            profile.from.people(),
-            profile.to.people()
+            profile.from.to_the_minute(),
+            profile.to.to_the_minute()
         )?;
     } else {
         days(profile, out)?;
@@ -25,8 +25,8 @@ fn days(profile: &Profile, out: &mut impl Write) -> fmt::Result {
     writeln!(
         out,
         "Mains by time of day, {} to {} ({}), V: mean and the band of 5 to 95 % of the 10-minute values\n",
-        profile.from.people(),
-        profile.to.people(),
+        profile.from.to_the_minute(),
+        profile.to.to_the_minute(),
         profile.time_zone
     )?;
     writeln!(out, "hour   working days             weekends")?;
@@ -42,7 +42,7 @@ fn days(profile: &Profile, out: &mut impl Write) -> fmt::Result {
     if !profile.highest.is_empty() {
         writeln!(out, "\nThe highest quarter hours of the last seven days:")?;
         for quarter in &profile.highest {
-            writeln!(out, "  {}  {:.1} V", quarter.at.people(), quarter.rms_v)?;
+            writeln!(out, "  {}  {:.1} V", quarter.at.to_the_minute(), quarter.rms_v)?;
         }
     }
     profile.rails.iter().try_for_each(|rail| self::rail(rail, out))
@@ -82,7 +82,7 @@ fn rail(rail: &RailProfile, out: &mut impl Write) -> fmt::Result {
 }
 
 fn tide(profile: &Profile, out: &mut impl Write) -> fmt::Result {
-    writeln!(out, "\nTide table as of {}", profile.as_of.people())?;
+    writeln!(out, "\nTide table as of {}", profile.as_of.to_the_minute())?;
     if let Some(why) = &profile.no_tide {
         return writeln!(out, "  None: {why}.");
     }
@@ -101,7 +101,7 @@ fn turn(turn: &TurnLine, out: &mut impl Write) -> fmt::Result {
         out,
         "  {:4}  {}  mains {:.1} V ({:.1} to {:.1} V)",
         turn.kind,
-        turn.at.people(),
+        turn.at.to_the_minute(),
         turn.mains_v,
         turn.low_v,
         turn.high_v
