@@ -79,12 +79,7 @@ impl Profile {
 impl RailProfile {
     /// The rail by time of day, as SVG; `id` unique on its page.
     pub(super) fn day_svg(&self, id: &str) -> String {
-        let title = format!(
-            "{}.{} by time of day, {}: would stand at",
-            self.amplifier,
-            self.node,
-            self.loading.word()
-        );
+        let title = format!("{}.{}, {}", self.amplifier, self.node, self.loading.word());
         day_band_svg(id, &title, &self.by_slot.working, &self.by_slot.weekend)
     }
 }

@@ -2,7 +2,7 @@ use super::*;
 use crate::alarm::CONDITIONS;
 use crate::config::Surroundings;
 use crate::mains::TideStep;
-use crate::watch::projector;
+use crate::watch::projecting;
 
 const HALL: &str = r#"
 [site]
@@ -50,7 +50,7 @@ fn profile(intervals: &[Interval], tide: &Result<TideTable, NoForecast>) -> Prof
     let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
     let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
     let site = Site::parse(HALL, "railtide.toml".as_ref(), &surroundings).unwrap();
-    let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
+    let projectors: Vec<_> = site.amplifiers.iter().map(|a| projecting(a, None).projector).collect();
     let to = Utc(SIX.0 + 1_800_000);
     let quarters = [interval(0, 234.5), interval(15, 236.5)];
     let known = Known { from: SIX, to, before: intervals, intervals, quarters: &quarters, as_of: to, tide };
