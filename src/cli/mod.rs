@@ -17,6 +17,7 @@ mod simulate;
 mod site;
 mod stop;
 mod stretch;
+mod week;
 
 use std::io::{self, Write};
 use std::path::PathBuf;
@@ -56,6 +57,8 @@ enum Command {
     Alarm(alarm::Alarm),
     /// Shows the household's day by time of day, time above the limits, and the tide table of the hours to come.
     Profile(profile::Profile),
+    /// Gives a week of evidence against the supply rules and the amplifiers' limits.
+    Week(week::WeekCommand),
     /// Gives readings, intervals or the alarms' journal out, or a consistent copy of the record.
     Export(export::Export),
     /// Takes another recorder's readings into the record.
@@ -88,6 +91,7 @@ pub fn main() -> ExitCode {
         Command::Now(now) => now.run(config),
         Command::Alarm(alarm) => alarm.run(config),
         Command::Profile(profile) => profile.run(config),
+        Command::Week(week) => week.run(config),
         Command::Export(export) => export.run(config),
         Command::Import(import) => import.run(config),
         Command::Simulate(simulate) => simulate.run(),

@@ -1,7 +1,7 @@
 //! The stretch of time that a command looks at: `--from`/`--to`, `--week 2026-W48`, `--last "7 days"`.
 
 use anyhow::{Context, bail};
-use chrono::{DateTime, Days, NaiveDate, NaiveDateTime, NaiveTime, TimeZone, Weekday};
+use chrono::{DateTime, Datelike, Days, NaiveDate, NaiveDateTime, NaiveTime, TimeZone, Weekday};
 use chrono_tz::Tz;
 use clap::Args;
 
@@ -81,6 +81,13 @@ fn week_from(monday: NaiveDate, zone: Tz) -> Stretch {
 /// One moment by RFC 3339, or in the site's zone; a day alone is its beginning.
 pub(super) fn instant(text: &str, zone: Tz) -> anyhow::Result<Utc> {
     time(text, zone, Edge::Start)
+}
+
+/// The last whole week from Monday to Sunday before `now`.
+pub(super) fn week_before(now: Utc, zone: Tz) -> Stretch {
+    let today = DateTime::from_timestamp_millis(now.0).unwrap_or_default().with_timezone(&zone).date_naive();
+    let back = 7 + u64::from(today.weekday().num_days_from_monday());
+    week_from(today - Days::new(back), zone)
 }
 
 /// A time by RFC 3339, or in the site's zone.

@@ -100,6 +100,11 @@ impl<'a> Notes<'a> {
         Notes { file, text, line_starts, complaints: RefCell::default(), warnings: RefCell::default() }
     }
 
+    /// The file's text.
+    pub(super) fn text(&self) -> &'a str {
+        self.text
+    }
+
     /// Notes a mistake at `span`, quoting what is written there.
     pub(super) fn complain(&self, span: Span, says: impl Into<String>) {
         self.complain_of(span, self.quote(span), says);

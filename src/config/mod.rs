@@ -20,6 +20,7 @@ mod notices;
 mod parse;
 mod rectifier;
 mod references;
+mod rules;
 mod secret;
 mod site;
 mod table;

@@ -12,7 +12,8 @@ use super::complaint::{Complaints, Notes, Span};
 use super::nearest::nearest;
 use super::site::{Site, StoreSettings};
 use super::table::{Bounds, Keys, Table};
-use super::{amplifier, logger, notices, references};
+use super::{amplifier, logger, notices, references, rules};
+use crate::mains::SupplyRule;
 use crate::supply::MainsWave;
 
 /// What the reader of a config file has to be told, since it looks at nothing but the text.
@@ -75,6 +76,7 @@ const ROOT: Keys = &[
     ("amplifier", "[[amplifier]]"),
     ("alarm", "[[alarm]]"),
     ("receiver", "[[receiver]]"),
+    ("rule", "[[rule]]"),
 ];
 
 const SITE: Keys = &[
@@ -83,6 +85,7 @@ const SITE: Keys = &[
     ("frequency_hz", "50"),
     ("declared_v", "230"),
     ("guard_band", "1.0"),
+    ("supply_rules", "\"EN 50160\""),
     ("wave", "{ third_pct = 1.0, fifth_pct = -3.0 }"),
 ];
 
@@ -108,7 +111,7 @@ fn read<'a>(
     let folder = file.parent().unwrap_or(Path::new(""));
     let root = Table::open(notes, tree, Span { start: 0, end: 0 }, "the top level", ROOT);
 
-    let site = read_site(root);
+    let site = read_site(root, rules::read_own(root));
     let store = read_store(root, folder, surroundings);
     let loggers = logger::read_loggers(root);
     let channels = logger::read_channels(root);
@@ -130,6 +133,7 @@ fn read<'a>(
         alarms: alarms?,
         receivers: receivers?,
         guard_band: site.guard_band,
+        supply_rules: site.supply_rules,
         warnings: Vec::new(),
     })
 }
@@ -140,10 +144,11 @@ struct ReadSite {
     time_zone: Option<Tz>,
     declared_v: f64,
     guard_band: f64,
+    supply_rules: Vec<SupplyRule>,
     mains: SiteMains,
 }
 
-fn read_site(root: Table<'_>) -> ReadSite {
+fn read_site(root: Table<'_>, own_rules: Vec<SupplyRule>) -> ReadSite {
     let table = root.table("site", "[site]", SITE);
     if !root.key("site").is_present() {
         let says = "[site] is missing; expected it with at least a name and a time_zone";
@@ -155,6 +160,7 @@ fn read_site(root: Table<'_>) -> ReadSite {
         time_zone: table.and_then(read_time_zone),
         declared_v: number("declared_v", Bounds::Within(80.0, 480.0), 230.0),
         guard_band: number("guard_band", Bounds::Within(0.0, 5.0), 1.0),
+        supply_rules: rules::read_chosen(table, own_rules),
         mains: SiteMains {
             frequency_hz: number("frequency_hz", Bounds::Within(40.0, 70.0), 50.0),
             wave: table.map(read_wave).unwrap_or_default(),

@@ -9,6 +9,7 @@ use chrono_tz::Tz;
 use super::complaint::Complaint;
 use super::secret::SecretSource;
 use crate::alarm::Priority;
+use crate::mains::SupplyRule;
 use crate::reading::ChannelQuantity;
 use crate::supply::{Circuit, Loading, MainsWave, Measured};
 
@@ -40,6 +41,8 @@ pub struct Site {
     /// How much of the projected rail's U (k = 2) is taken off a limit to get the setpoint (JCGM 106 guard band,
     /// rejection side: a larger one warns earlier).
     pub guard_band: f64,
+    /// The supply rules that the mains is judged by, in the order in which they are named.
+    pub supply_rules: Vec<SupplyRule>,
     /// Values that are possible but unlikely, each with the reason.
     pub warnings: Vec<Complaint>,
 }

@@ -48,6 +48,17 @@ pub enum EventKind {
     Interruption,
 }
 
+impl EventKind {
+    /// The word shown to people and programs.
+    pub fn word(self) -> &'static str {
+        match self {
+            EventKind::Dip => "dip",
+            EventKind::Swell => "swell",
+            EventKind::Interruption => "interruption",
+        }
+    }
+}
+
 /// One event of the mains.
 #[derive(Clone, Copy, Debug, PartialEq, Serialize, Deserialize)]
 pub struct Event {

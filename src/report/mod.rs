@@ -11,6 +11,7 @@ mod profile;
 mod standing;
 mod time;
 mod understood;
+pub mod week;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};

@@ -33,6 +33,11 @@ impl LocalTime {
         self.0.format("%a %-d %b %H:%M").to_string()
     }
 
+    /// For a heading: `Monday 30 November 2026`.
+    pub fn day(self) -> String {
+        self.0.format("%A %-d %B %Y").to_string()
+    }
+
     /// For people who read it elsewhere or later: `18:42:10 CEST on Tue 6 Oct 2026`. The zone's short name tells the
     /// two autumn hours apart.
     pub fn in_full(self) -> String {

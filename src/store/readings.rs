@@ -67,6 +67,32 @@ impl Store {
         Ok(())
     }
 
+    /// How long each reading of `channel` stands for in that time: the shortest of the closed hours', or that of live
+    /// readings.
+    pub fn sample_period(
+        &self,
+        channel: ChannelId,
+        from: Utc,
+        to: Utc,
+    ) -> Result<std::time::Duration, StoreError> {
+        let shortest = || -> rusqlite::Result<u32> {
+            let closed: Option<u32> = self
+                .conn
+                .prepare_cached(
+                    "SELECT min(sample_period_ms) FROM block WHERE key >= ?1 AND key < ?2 AND channel = ?3",
+                )?
+                .query_row(
+                    params![hour_of(Utc(from.0.max(0))).0 << 8, to.0.min(i64::MAX >> 8) << 8, channel.0],
+                    |row| row.get(0),
+                )?;
+            match closed {
+                Some(period) => Ok(period),
+                None => super::hours::live_period(&self.conn, channel),
+            }
+        };
+        shortest().map(|ms| std::time::Duration::from_millis(u64::from(ms))).map_err(|e| self.fault(e))
+    }
+
     /// About how many readings of `channel` there are from `from` until before `to`: whole hours where they are closed.
     pub fn count_readings(&self, channel: ChannelId, from: Utc, to: Utc) -> Result<u64, StoreError> {
         let (from, to) = (Utc(from.0.max(0)), Utc(to.0.min(i64::MAX >> 8)));

@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 file, period_s = sys.argv[1], int(sys.argv[2])
-rows = pd.read_csv(file, parse_dates=["time"])
+rows = pd.read_csv(file, names=["time", "volts"], header=0, parse_dates=["time"])
 rows["start"] = rows["time"].dt.floor("10min")
 groups = rows.groupby("start")["volts"]
 rms = groups.apply(lambda v: np.sqrt(np.mean(np.square(v.to_numpy()))))

@@ -156,7 +156,7 @@ impl TwoScale<'_> {
         let mut last_x = f64::NEG_INFINITY;
         while at <= self.to.0 {
             let local = self.local(Utc(at));
-            if at >= self.from.0 && local.minute() == 0 && local.hour() % step == 0 {
+            if at >= self.from.0 && local.minute() == 0 && local.hour().is_multiple_of(step) {
                 let here = x.at(at as f64);
                 pen.line("grid", (here, TOP), (here, self.height - BOTTOM));
                 if here - last_x > 30.0 {
