@@ -11,6 +11,7 @@ mod import;
 mod listen;
 mod now;
 mod ports;
+mod profile;
 mod run;
 mod simulate;
 mod site;
@@ -54,6 +55,8 @@ enum Command {
     Now(now::Now),
     /// Lists alarms, or acknowledges one.
     Alarm(alarm::Alarm),
+    /// Shows the household's day by time of day, time above the limits, and the tide table of the hours to come.
+    Profile(profile::Profile),
     /// Gives a week of evidence against the supply rules and the amplifiers' limits.
     Week(week::WeekCommand),
     /// Gives readings, intervals or the alarms' journal out, or a consistent copy of the record.
@@ -87,6 +90,7 @@ pub fn main() -> ExitCode {
         Command::Listen(listen) => listen.run(config),
         Command::Now(now) => now.run(config),
         Command::Alarm(alarm) => alarm.run(config),
+        Command::Profile(profile) => profile.run(config),
         Command::Week(week) => week.run(config),
         Command::Export(export) => export.run(config),
         Command::Import(import) => import.run(config),

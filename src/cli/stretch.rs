@@ -78,6 +78,11 @@ fn week_from(monday: NaiveDate, zone: Tz) -> Stretch {
     Stretch { from: midnight(monday, zone), to: midnight(monday + Days::new(7), zone) }
 }
 
+/// One moment by RFC 3339, or in the site's zone; a day alone is its beginning.
+pub(super) fn instant(text: &str, zone: Tz) -> anyhow::Result<Utc> {
+    time(text, zone, Edge::Start)
+}
+
 /// The last whole week from Monday to Sunday before `now`.
 pub(super) fn week_before(now: Utc, zone: Tz) -> Stretch {
     let today = DateTime::from_timestamp_millis(now.0).unwrap_or_default().with_timezone(&zone).date_naive();

@@ -7,6 +7,7 @@ mod alarms;
 pub mod chart;
 pub mod export;
 mod notice;
+mod profile;
 mod standing;
 mod time;
 mod understood;
@@ -14,6 +15,7 @@ pub mod week;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
+pub use profile::{Known, Profile, profile_csv, profile_html, profile_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
 pub use understood::understood_text;

@@ -28,6 +28,11 @@ impl LocalTime {
         self.0.format("%a %-d %b %H:%M:%S").to_string()
     }
 
+    /// For people, where seconds would promise too much: `Tue 1 Dec 20:40`.
+    pub fn to_the_minute(self) -> String {
+        self.0.format("%a %-d %b %H:%M").to_string()
+    }
+
     /// For a heading: `Monday 30 November 2026`.
     pub fn day(self) -> String {
         self.0.format("%A %-d %B %Y").to_string()

@@ -103,7 +103,7 @@ fn gaps_and_interruptions_are_borne() {
     for i in &mut intervals[600..612] {
         i.rms_v = 0.3;
     }
-    for i in &mut intervals[4_400..4_406] {
+    for i in &mut intervals[4_200..4_206] {
         i.rms_v = 115.0;
     }
     let holed = day_ahead(&intervals, at, Tz::Europe__Berlin).unwrap();

@@ -219,7 +219,7 @@ impl TwoScale<'_> {
         let half = INTERVAL.as_millis() as i64 / 2;
         let ends = self.recorded.iter().map(|p| (p.at.0 - half, p.at.0 + half));
         // What lies ahead of the record's end is no gap where it's expected.
-        let until = if self.expected.is_empty() { self.to.0 } else { i64::MIN };
+        let until = if self.expected.is_empty() { self.to.0 } else { self.from.0 };
         let mut covered = self.from.0;
         for (from, to) in ends.chain(std::iter::once((until, until))) {
             if from - covered > half {
