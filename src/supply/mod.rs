@@ -5,18 +5,22 @@
 
 mod circuit;
 mod curve;
+mod describe;
 mod device;
 mod doubt;
 mod measures;
 mod mesh;
 mod monotone;
 mod network;
+mod options;
 mod paths;
 mod period;
 mod projection;
 #[cfg(test)]
 mod published;
+mod rest;
 mod shooting;
+mod solver;
 mod stage;
 mod steady;
 #[cfg(test)]
@@ -28,11 +32,10 @@ pub use circuit::{
     Section, SeriesPart, Transformer, Winding,
 };
 pub use curve::{Measured, RailCurve, SolvedCurve};
+pub use options::{SolveError, SolveOptions, Warm};
 pub use projection::Grid;
-pub use steady::{
-    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
-    steady_state, sweep,
-};
+pub use solver::Solver;
+pub use steady::{DropperState, NodeState, PowerBalance, SteadyState, Work, steady_state, sweep};
 
 use crate::quantity::Uncertain;
 
