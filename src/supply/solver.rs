@@ -12,6 +12,9 @@ use super::steady::{SteadyState, Work};
 /// How closely the first, rough solution is taken before the mesh is fitted to it.
 const ROUGH: f64 = 1e-4;
 
+/// Load that damps everything, as the source's resistance over the load's.
+const DAMPING_LOAD: f64 = 0.05;
+
 /// Solutions that are kept for the next one's start: a parabola's.
 const MOST_EARLIER: usize = 3;
 
@@ -92,12 +95,40 @@ impl<'a> Solver<'a> {
     /// From nothing: roughly on even steps, then on a mesh that fits what was seen.
     fn solve_cold(&mut self, mains_v: f64, emf_v: f64) -> Result<(Periodic, Work), SolveError> {
         let mesh = Mesh::even(&self.circuit.wave, self.span(), self.steps());
-        let start = self.cold_start(emf_v);
-        let rough = self.shoot(mains_v, emf_v, &mesh, start, self.options.residual.max(ROUGH))?;
+        let rough = self
+            .shoot(&self.net, mains_v, emf_v, &mesh, self.cold_start(emf_v), self.rough_residual())
+            .or_else(|_| self.solve_by_loads(mains_v, emf_v, &mesh))?;
         self.earlier = vec![Warm::new(mains_v, &rough)];
         self.mesh = None;
         let (fine, work) = self.solve_on(mains_v, emf_v)?;
         Ok((fine, Work { walks: rough.tries + work.walks, ..work }))
+    }
+
+    /// The long way round: under a load that damps everything the steady state is easily found, and from there the
+    /// load is taken away little by little, each solution starting the next. Filters that ring for hundreds of
+    /// periods, with next to nothing drawing, want this.
+    fn solve_by_loads(&self, mains_v: f64, emf_v: f64, mesh: &Mesh) -> Result<Periodic, SolveError> {
+        let own: f64 = self.net.nodes.iter().map(|node| node.drawn(self.rest_v(emf_v)).0).sum();
+        let own = own / self.rest_v(emf_v);
+        let mut extra = DAMPING_LOAD / self.net.source_ohm.max(1.0) / self.net.nodes.len() as f64;
+        let mut start = self.cold_start(emf_v);
+        let mut walks = 0;
+        loop {
+            let mut net = self.net.clone();
+            net.nodes.iter_mut().for_each(|node| node.siemens += extra);
+            let mut found = self.shoot(&net, mains_v, emf_v, mesh, start, self.rough_residual())?;
+            walks += found.tries;
+            if extra == 0.0 {
+                found.tries = walks;
+                return Ok(found);
+            }
+            start = found.state;
+            extra = if extra < 1e-3 * own { 0.0 } else { extra / 2.0 };
+        }
+    }
+
+    fn rough_residual(&self) -> f64 {
+        self.options.residual.max(ROUGH)
     }
 
     /// From the last solutions, on a mesh that fits the last one.
@@ -110,7 +141,8 @@ impl<'a> Solver<'a> {
                 Mesh::refined(&self.circuit.wave, self.span(), self.steps(), conducts, overlaps)
             }
         };
-        let found = self.shoot(mains_v, emf_v, &mesh, self.start_on(mains_v), self.options.residual)?;
+        let found =
+            self.shoot(&self.net, mains_v, emf_v, &mesh, self.start_on(mains_v), self.options.residual)?;
         let work = Work { walks: found.tries, steps: mesh.steps.len() };
         self.mesh = Some(mesh);
         Ok((found, work))
@@ -146,14 +178,14 @@ impl<'a> Solver<'a> {
 
     fn shoot(
         &self,
+        net: &Network,
         mains_v: f64,
         emf_v: f64,
         mesh: &Mesh,
         start: Vec<f64>,
         residual: f64,
     ) -> Result<Periodic, SolveError> {
-        let drive =
-            Drive { net: &self.net, mesh, emf_v, period_s: 1.0 / self.circuit.frequency_hz, half: self.half };
+        let drive = Drive { net, mesh, emf_v, period_s: 1.0 / self.circuit.frequency_hz, half: self.half };
         let scale = self.scale(emf_v);
         let goal = Goal {
             residual,
@@ -161,7 +193,7 @@ impl<'a> Solver<'a> {
             scale: &scale,
             conducting: (self.first_voltage_state(), 0.9 * self.first_rest_v(emf_v)),
         };
-        let mut walker = Walker::new(&self.net, self.rest_v(emf_v));
+        let mut walker = Walker::new(net, self.rest_v(emf_v));
         let (amplifier, loading) = (self.circuit.amplifier.clone(), self.loading.word());
         shoot(&mut walker, &drive, &goal, start).map_err(|why| match why {
             NoPeriod::Stuck(stuck) => {
