@@ -8,6 +8,8 @@ mod curve;
 mod describe;
 mod device;
 mod doubt;
+#[cfg(test)]
+mod exact;
 mod measures;
 mod mesh;
 mod monotone;
@@ -23,6 +25,7 @@ mod shooting;
 mod solver;
 mod stage;
 mod steady;
+mod tangent;
 #[cfg(test)]
 mod test_circuits;
 mod wave;
