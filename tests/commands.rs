@@ -54,7 +54,17 @@ fn after_an_evening() -> Bench {
 #[test]
 fn check_says_back_what_it_understood_and_where_each_limit_is_reached() {
     let bench = Bench::hall("/dev/serial/by-id/usb-logger".as_ref(), "http://127.0.0.1:1/?key=secret");
-    insta::assert_snapshot!(settled(&bench.say(&["check"]), &bench), @r#""#);
+    insta::assert_snapshot!(settled(&bench.say(&["check"]), &bench), @r#"
+The site "hall" keeps the time of Europe/Lisbon; its mains is declared 230 V at 50 Hz.
+The record is FOLDER/hall.db; readings are written to it every 1 s, alarms at once.
+The logger "bench" speaks tide lines at 115200 baud on /dev/serial/by-id/usb-logger:
+  "mains" is the mains, V r.m.s., a reading every 100 ms, ±(0.2 % + 0.1 V).
+  "hall.reservoir" is the rail of "hall" at "reservoir", V, a reading every 100 ms, ±(0.5 % + 0.2 V).
+The amplifier "hall": "reservoir" follows mains in proportion, from 452 V measured at 220 V of mains (idle, meter ±0.5 %). Other loadings and nodes are unknown.
+  "reservoir" must stay under 480 V (anode supply limit): projected at idle, it is reached at 233.6 V of mains; the alarm's setpoint is 471 V (less its uncertainty), reached at 229.4 V of mains; measured, its setpoint is 477 V.
+The condition rail-high is changed by the config.
+Notices of priority low and above go to "phone" by webhook, http://127.0.0.1:1/?….
+"#);
 }
 
 #[test]
@@ -65,14 +75,112 @@ fn check_shows_every_mistake_with_its_line_and_fails() {
     let output = bench.run(&["check"]);
     assert!(!output.status.success());
     assert!(output.stdout.is_empty(), "results alone go to standard output");
-    insta::assert_snapshot!(settled(&String::from_utf8_lossy(&output.stderr), &bench), @r#""#);
+    insta::assert_snapshot!(settled(&String::from_utf8_lossy(&output.stderr), &bench), @r#"
+railtide: the config has mistakes, and nothing was done:
+FOLDER/railtide.toml:5: declared_v = "230": expected a number such as 230
+FOLDER/railtide.toml:36: metre_pct: no key of [amplifier.measured]; did you mean meter_pct, for example meter_pct = 1.0?
+"#);
 }
 
 #[test]
 fn now_and_alarm_tell_the_same_story_as_text_and_as_json() {
     let bench = after_an_evening();
-    insta::assert_snapshot!(settled(&bench.say(&["now", "--format", "json"]), &bench), @r#""#);
-    insta::assert_snapshot!(settled(&bench.say(&["alarm", "list", "--format", "json"]), &bench), @r#""#);
+    insta::assert_snapshot!(settled(&bench.say(&["now", "--format", "json"]), &bench), @r#"
+{
+  "site": "hall",
+  "at": HIDDEN,
+  "channels": [
+    {
+      "channel": "mains",
+      "quantity": "mains_rms",
+      "value_v": 238.0,
+      "value_u_v": 0.665107510106449,
+      "read_at": HIDDEN,
+      "age_s": HIDDEN,
+      "quality": "good",
+      "fresh": true
+    },
+    {
+      "channel": "hall.reservoir",
+      "quantity": "rail",
+      "value_v": 470.0,
+      "value_u_v": 2.944486372867092,
+      "read_at": HIDDEN,
+      "age_s": HIDDEN,
+      "quality": "good",
+      "fresh": true
+    }
+  ],
+  "rails": [
+    {
+      "amplifier": "hall",
+      "node": "reservoir",
+      "loading": "idle",
+      "limit_v": 480.0,
+      "why": "anode supply limit",
+      "basis": "measured_pair",
+      "projected_v": 488.9818181818182,
+      "projected_u_v": 9.884644564242825,
+      "projected_setpoint_v": 471.3735706042489,
+      "headroom_v": -17.608247577569273,
+      "measured_v": 470.0,
+      "measured_u_v": 2.944486372867092,
+      "measured_setpoint_v": 476.99777860021396,
+      "proved_on": true,
+      "setpoint_at_mains_v": 229.42961401091762
+    }
+  ],
+  "alarms": [
+    {
+      "alarm": "rail-high:hall.reservoir",
+      "state": "unacknowledged",
+      "active": true,
+      "priority": "high",
+      "since": HIDDEN,
+      "raised_at": HIDDEN,
+      "facts": {
+        "value": 488.9818181818182,
+        "value_u": 9.884644564242825,
+        "setpoint": 471.3735706042489,
+        "limit": 480.0,
+        "unit": "V",
+        "mains_v": 238.0,
+        "source": "projected",
+        "loading": "idle",
+        "proved_on": true
+      },
+      "advice": "Switch the amplifier off now if it is on, and leave it off until the mains has come down. Its capacitors stay charged after that: nobody opens it without training."
+    }
+  ]
+}
+"#);
+    insta::assert_snapshot!(settled(&bench.say(&["alarm", "list", "--format", "json"]), &bench), @r#"
+{
+  "at": HIDDEN,
+  "alarms": [
+    {
+      "alarm": "rail-high:hall.reservoir",
+      "state": "unacknowledged",
+      "active": true,
+      "priority": "high",
+      "since": HIDDEN,
+      "raised_at": HIDDEN,
+      "facts": {
+        "value": 488.9818181818182,
+        "value_u": 9.884644564242825,
+        "setpoint": 471.3735706042489,
+        "limit": 480.0,
+        "unit": "V",
+        "mains_v": 238.0,
+        "source": "projected",
+        "loading": "idle",
+        "proved_on": true
+      },
+      "advice": "Switch the amplifier off now if it is on, and leave it off until the mains has come down. Its capacitors stay charged after that: nobody opens it without training."
+    }
+  ]
+}
+"#);
     let text = bench.say(&["now"]);
     assert!(text.contains("mains"), "{text}");
     let text = bench.say(&["alarm"]);
@@ -84,10 +192,10 @@ fn now_and_alarm_tell_the_same_story_as_text_and_as_json() {
 fn an_alarm_is_acknowledged_without_a_daemon_too() {
     let bench = after_an_evening();
     let answer = bench.say(&["alarm", "ack", "rail-high:hall.reservoir"]);
-    insta::assert_snapshot!(answer, @r#""#);
+    insta::assert_snapshot!(answer, @r#"rail-high:hall.reservoir is acknowledged; it stays active until its condition goes away."#);
     let again = bench.run(&["alarm", "ack", "rail-high"]);
     assert!(!again.status.success());
-    insta::assert_snapshot!(String::from_utf8_lossy(&again.stderr), @r#""#);
+    insta::assert_snapshot!(String::from_utf8_lossy(&again.stderr), @r#"railtide: the alarm rail-high:hall.reservoir is acknowledged: that can't be done to it now"#);
     assert_eq!(bench.count("SELECT count(*) FROM journal WHERE done_by IS NOT NULL"), Some(1));
 }
 
@@ -96,7 +204,7 @@ fn before_the_first_run_now_says_that_there_is_no_record_yet() {
     let bench = Bench::hall("/dev/null".as_ref(), "http://127.0.0.1:1/");
     let output = bench.run(&["now"]);
     assert!(!output.status.success());
-    insta::assert_snapshot!(settled(&String::from_utf8_lossy(&output.stderr), &bench), @r#""#);
+    insta::assert_snapshot!(settled(&String::from_utf8_lossy(&output.stderr), &bench), @r#"railtide: there is no database at FOLDER/hall.db: start `railtide run` once, or set `[store] path` to where it is"#);
 }
 
 #[test]
@@ -193,7 +301,7 @@ fn garbage_and_strange_values_on_the_line_are_counted_said_once_and_store_nothin
     let good = "7 700 mains=230500";
     line.raw(format!("@{good}*{:04X}\n", support::crc_ccitt_false(good.as_bytes())).as_bytes());
     wait_for("the good line is stored", || {
-        (bench.count("SELECT count(*) FROM open WHERE value_mv = 230500 AND quality = 0")? == 1).then_some(())
+        (bench.count("SELECT count(*) FROM open WHERE mv = 230500 AND quality = 0")? == 1).then_some(())
     });
     assert!(daemon.stop().success());
     assert_eq!(
@@ -223,7 +331,7 @@ fn an_unplugged_logger_is_found_again_where_its_link_then_points() {
     wait_for("a reading by the first device", || {
         first.send(&[("mains", 229_000)]);
         std::thread::sleep(Duration::from_millis(20));
-        (bench.count("SELECT count(*) FROM open WHERE value_mv = 229000")? > 0).then_some(())
+        (bench.count("SELECT count(*) FROM open WHERE mv = 229000")? > 0).then_some(())
     });
     std::fs::remove_file(&link).unwrap();
     drop(first);
@@ -233,7 +341,7 @@ fn an_unplugged_logger_is_found_again_where_its_link_then_points() {
     wait_for("a reading by the second device", || {
         second.send(&[("mains", 231_000)]);
         std::thread::sleep(Duration::from_millis(20));
-        (bench.count("SELECT count(*) FROM open WHERE value_mv = 231000")? > 0).then_some(())
+        (bench.count("SELECT count(*) FROM open WHERE mv = 231000")? > 0).then_some(())
     });
     assert!(daemon.stop().success());
 }

@@ -292,7 +292,7 @@ fn readings_that_waited_for_the_clock_move_to_their_time_when_it_is_known() {
     let (first, second, other_run) = (waiting(7, 100), waiting(7, 1100), waiting(8, 100));
     scene.store.commit(&Batch { waiting: vec![first, other_run], ..Batch::default() }).unwrap();
     assert_eq!(scene.all(), []);
-    let placed = PlacedSession { session: 7, utc_of_zero: Utc(EVENING) };
+    let placed = PlacedSession { session: 7, utc_of_zero: Utc(EVENING), sure: true };
     scene.store.commit(&Batch { waiting: vec![second], placed: vec![placed], ..Batch::default() }).unwrap();
     assert_eq!(scene.all(), [scene.reading(EVENING + 100, 229_100), scene.reading(EVENING + 1100, 230_100)]);
 }

@@ -166,6 +166,20 @@ pub const CONDITIONS: &[Condition] = &[
         set_in: "[[channel]] sample_period_ms (ten periods, at least 15 s)",
         judge: logger_silent,
     },
+    Condition {
+        name: "store-full",
+        meaning: "the disk of the record will be full within a week at the record's own growth",
+        priority: Priority::Medium,
+        side: Side::Under,
+        deadband: 1.0,
+        unit: "days",
+        on_delay: seconds(600),
+        off_delay: seconds(600),
+        advice: "Free some space on the record's disk, give [store] path a larger one, or let old readings go with \
+                 [store] keep_readings. When it is full alarms still go out, but readings are lost.",
+        set_in: "[store] keep_readings",
+        judge: store_full,
+    },
 ];
 
 /// The condition called `name`.
@@ -255,6 +269,27 @@ fn logger_silent(figures: &Figures) -> Vec<Judged> {
         .collect()
 }
 
+/// A week: time enough to find another card.
+const FULL_WITHIN_DAYS: f64 = 7.0;
+
+fn store_full(figures: &Figures) -> Vec<Judged> {
+    let Some(room) = figures.room else { return Vec::new() };
+    let days = room.days_left();
+    vec![Judged {
+        subject: String::new(),
+        value: Some(days),
+        setpoint: FULL_WITHIN_DAYS,
+        suppressed: false,
+        facts: Facts {
+            value: Some(days),
+            setpoint: Some(FULL_WITHIN_DAYS),
+            unit: "days".to_owned(),
+            note: format!("{:.0} MB are free", room.free_bytes as f64 / 1e6),
+            ..Facts::default()
+        },
+    }]
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -294,6 +329,21 @@ mod tests {
         assert_eq!(rail_high(&rail(None, None))[0].value, None);
         assert!(rail_high(&rail(Some(490.0), Some(0.3)))[0].suppressed);
         assert!(!rail_high(&rail(Some(490.0), None))[0].suppressed);
+    }
+
+    #[test]
+    fn the_disk_is_told_days_before_it_is_full_by_the_records_own_growth() {
+        let days = |free_bytes, bytes_per_day| {
+            let room = super::super::RoomFigures { free_bytes, bytes_per_day };
+            store_full(&Figures { room: Some(room), ..Figures::default() })[0].value.unwrap()
+        };
+        // Two channels at a reading a second: about 0.35 MB a day.
+        assert!((days(320_000_000, Some(350_000.0)) - 857.0).abs() < 1.0);
+        assert!(days(21_000_000, Some(350_000.0)) < FULL_WITHIN_DAYS);
+        assert_eq!(days(5_000_000, Some(350_000.0)), 0.0);
+        assert!(days(1_000_000_000, None) > FULL_WITHIN_DAYS, "a young record on a roomy disk alarms nobody");
+        assert!(days(100_000_000, None) < FULL_WITHIN_DAYS);
+        assert!(store_full(&Figures::default()).is_empty(), "nobody has looked yet");
     }
 
     #[test]

@@ -24,6 +24,8 @@ pub struct Figures {
     pub dissipations: Vec<PartFigures>,
     /// Each capacitor that meets the unloaded rail: that rail if the amplifier were switched on cold now, V.
     pub unloaded: Vec<PartFigures>,
+    /// The room left for the record; `None` while nobody has looked.
+    pub room: Option<RoomFigures>,
     /// Each measured rail that can be projected: how far it lies outside the band from full to idle, V.
     pub apart: Vec<PartFigures>,
 }
@@ -45,6 +47,27 @@ pub struct PartFigures {
     pub suppressed: bool,
     /// What else there is to say.
     pub note: String,
+}
+
+/// The room left on the record's disk.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RoomFigures {
+    /// Bytes that the disk has free for us.
+    pub free_bytes: u64,
+    /// Bytes that the record grows by in a day; `None` while it is too young to tell.
+    pub bytes_per_day: Option<f64>,
+}
+
+impl RoomFigures {
+    /// So little is no room, bytes: a commit, the log and a day's growth of any site must fit.
+    const NONE_LEFT: u64 = 20_000_000;
+
+    /// Days until the disk is full at the record's own growth. A record that is too young to tell is taken to grow by
+    /// [`RoomFigures::NONE_LEFT`] a day, which two hundred channels at a reading a second would.
+    pub fn days_left(&self) -> f64 {
+        let free = self.free_bytes.saturating_sub(Self::NONE_LEFT) as f64;
+        free / self.bytes_per_day.unwrap_or(Self::NONE_LEFT as f64).max(1.0)
+    }
 }
 
 /// How one logger does.

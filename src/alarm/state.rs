@@ -60,6 +60,24 @@ pub enum Event {
     PutBack,
 }
 
+impl Event {
+    /// The word shown to people and programs.
+    pub fn word(self) -> &'static str {
+        match self {
+            Event::Raise => "raise",
+            Event::Clear => "clear",
+            Event::Acknowledge => "acknowledge",
+            Event::ReAlarm => "re_alarm",
+            Event::Shelve => "shelve",
+            Event::Unshelve => "unshelve",
+            Event::Suppress => "suppress",
+            Event::Unsuppress => "unsuppress",
+            Event::TakeOut => "take_out",
+            Event::PutBack => "put_back",
+        }
+    }
+}
+
 impl State {
     /// The word shown to people and programs.
     pub fn word(self) -> &'static str {

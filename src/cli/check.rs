@@ -14,7 +14,7 @@ impl Check {
     pub(super) fn run(self, config: Option<PathBuf>) -> anyhow::Result<()> {
         let site = super::site::load(config)?;
         let mut text = String::new();
-        understood_text(&site, &super::site::rails(&site), &mut text)?;
+        understood_text(&site, &super::site::rails(&site)?, &mut text)?;
         for warning in &site.warnings {
             text += &format!("Unlikely: {warning}\n");
         }

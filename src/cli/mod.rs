@@ -6,6 +6,8 @@
 mod alarm;
 mod check;
 mod demo;
+mod export;
+mod import;
 mod listen;
 mod now;
 mod ports;
@@ -13,6 +15,7 @@ mod run;
 mod simulate;
 mod site;
 mod stop;
+mod stretch;
 
 use std::io::{self, Write};
 use std::path::PathBuf;
@@ -50,6 +53,10 @@ enum Command {
     Now(now::Now),
     /// Lists alarms, or acknowledges one.
     Alarm(alarm::Alarm),
+    /// Gives readings, intervals or the alarms' journal out, or a consistent copy of the record.
+    Export(export::Export),
+    /// Takes another recorder's readings into the record.
+    Import(import::Import),
     /// Runs the simulated logger alone, on a pseudo-terminal.
     Simulate(simulate::Simulate),
 }
@@ -77,6 +84,8 @@ pub fn main() -> ExitCode {
         Command::Listen(listen) => listen.run(config),
         Command::Now(now) => now.run(config),
         Command::Alarm(alarm) => alarm.run(config),
+        Command::Export(export) => export.run(config),
+        Command::Import(import) => import.run(config),
         Command::Simulate(simulate) => simulate.run(),
     };
     match result {

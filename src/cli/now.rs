@@ -56,5 +56,5 @@ pub(super) fn standing(site: &Site, store: &Store, now: Utc) -> anyhow::Result<S
             None => Ok(None),
         })
         .collect::<Result<Vec<_>, _>>()?;
-    Ok(Standing::new(site, &super::site::rails(site), &latest, now))
+    Ok(Standing::new(site, &super::site::rails(site)?, &latest, now))
 }

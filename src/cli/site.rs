@@ -6,9 +6,10 @@ use anyhow::{Context, bail};
 use etcetera::BaseStrategy;
 
 use crate::alarm::CONDITIONS;
-use crate::config::{Site, Surroundings};
-use crate::store::Store;
-use crate::watch::{RailWatch, projector, rail_watches};
+use crate::config::{Amplifier, Site, Surroundings};
+use crate::store::{Store, StoreError};
+use crate::supply::fit::RecordedFit;
+use crate::watch::{Projecting, RailWatch, projecting, rail_watches, valid_fit};
 
 /// Reads the config: the given file, or the first that exists of those that `--help` names.
 pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
@@ -49,10 +50,29 @@ pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
     Ok(Store::open_read_only(&site.store.path)?)
 }
 
+/// The newest fit of each amplifier that still holds. A site without a record has none.
+pub(super) fn fits(site: &Site) -> anyhow::Result<Vec<Option<RecordedFit>>> {
+    let store = match Store::open_read_only(&site.store.path) {
+        Ok(store) => store,
+        Err(StoreError::Missing { .. } | StoreError::NoFolder { .. }) => return Ok(vec![None; site.amplifiers.len()]),
+        Err(other) => return Err(other.into()),
+    };
+    let newest = |amplifier: &Amplifier| {
+        Ok(valid_fit(amplifier, &store.fits(&amplifier.name)?, site.time_zone).cloned())
+    };
+    site.amplifiers.iter().map(newest).collect()
+}
+
+/// What each amplifier's rails are projected by.
+pub(super) fn projections(site: &Site) -> anyhow::Result<Vec<Projecting>> {
+    let fits = fits(site)?;
+    Ok(site.amplifiers.iter().zip(&fits).map(|(amplifier, fit)| projecting(amplifier, fit.as_ref())).collect())
+}
+
 /// Every limit of the site with its projection.
-pub(super) fn rails(site: &Site) -> Vec<RailWatch> {
-    let projectors: Vec<_> = site.amplifiers.iter().map(projector).collect();
-    rail_watches(site, &projectors)
+pub(super) fn rails(site: &Site) -> anyhow::Result<Vec<RailWatch>> {
+    let projectors: Vec<_> = projections(site)?.into_iter().map(|projecting| projecting.projector).collect();
+    Ok(rail_watches(site, &projectors))
 }
 
 fn find() -> anyhow::Result<PathBuf> {

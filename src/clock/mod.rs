@@ -5,8 +5,10 @@
 //! still until it is told to move.
 
 mod time_base;
+mod trust;
 
 pub use time_base::{ClockStep, TimeBase};
+pub use trust::{Known, Trust, synchronised};
 
 use std::collections::BTreeMap;
 use std::sync::{Arc, Mutex, MutexGuard};
@@ -42,6 +44,14 @@ impl Clock {
         match self {
             Clock::System(c) => c.now(),
             Clock::Simulated(c) => c.now(),
+        }
+    }
+
+    /// Whether the system's time service has set this clock; `None` where nothing tells, as for a simulated one.
+    pub fn synchronised(&self) -> Option<bool> {
+        match self {
+            Clock::System(_) => synchronised(std::path::Path::new("/")),
+            Clock::Simulated(_) => None,
         }
     }
 

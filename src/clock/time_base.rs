@@ -79,6 +79,11 @@ impl TimeBase {
         Utc(mono.0 as i64 + self.offset_ms)
     }
 
+    /// The monotonic time that [`TimeBase::utc`] gave `at`.
+    pub fn mono(&self, at: Utc) -> Mono {
+        Mono((at.0 - self.offset_ms).max(0) as u64)
+    }
+
     /// The time of a line of `logger` that arrived at `received`.
     pub fn stamp(&mut self, logger: usize, received: Moment, logger_ms: Option<u64>) -> Stamp {
         let arrival_ms = received.mono.0 as i64;

@@ -1,10 +1,11 @@
 //! Amplifiers of the config: name, use, the short way of stating a supply, limits, service log. The full way is in
 //! `circuit`.
 
-use super::circuit::{SiteMains, is_full_way, read_supply};
+use super::circuit::{SiteMains, read_supply};
 use super::complaint::At;
+use super::full_way::is_full_way;
 use super::site::{Amplifier, DayWindow, Limit, MeasuredSupply, OutputStage, Rating, ServiceEvent};
-use super::table::{Bounds, Keys, Table};
+use super::table::{Bounds, HIGHEST_RAIL_V, Keys, Table};
 use super::transformer::MAINS_V;
 use super::valves::{OutputValve, output_valve};
 use crate::supply::{Loading, Measured};
@@ -42,9 +43,6 @@ const LIMIT: Keys = &[
 ];
 
 const EVENT: Keys = &[("on", "\"2026-10-02\""), ("what", "\"output valves changed, bias reset\"")];
-
-/// Highest rail that is believed, V.
-pub(super) const HIGHEST_RAIL_V: f64 = 5000.0;
 
 /// What could be read of one `[[amplifier]]`.
 pub(super) struct ReadAmplifier<'a> {

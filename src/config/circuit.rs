@@ -1,12 +1,13 @@
 //! The full way of stating a supply: its tables put together into a [`Circuit`].
 
-use super::filter::{DROPPER, FILTER, read_dropper, read_filter};
-use super::loads::{HEATER, LOAD, OUTPUT, node_index, read_heater, read_load, read_output};
-use super::rectifier::{RECTIFIER, is_doubler, read_cold_start, read_rectifier, usual_winding};
-use super::references::expect_known;
+use super::filter::{read_dropper, read_filter};
+use super::full_way::{FullWay, is_full_way};
+use super::loads::{OUTPUT, node_index, read_heater, read_load, read_output};
+use super::names::expect_known;
+use super::rectifier::{is_doubler, read_cold_start, read_rectifier, usual_winding};
 use super::site::{ColdStart, MeasuredSupply, OutputStage, Standby};
 use super::table::Table;
-use super::transformer::{TRANSFORMER, read_transformer};
+use super::transformer::read_transformer;
 use super::unlikely;
 use super::valves::output_valve;
 use crate::supply::{Circuit, MainsWave, Winding};
@@ -26,11 +27,6 @@ pub(super) struct ReadSupply<'a> {
     pub(super) output: Option<Option<OutputStage>>,
     pub(super) output_table: Option<Table<'a>>,
     pub(super) cold: Option<Option<ColdStart>>,
-}
-
-/// Whether the amplifier states its supply the full way, or means to.
-pub(super) fn is_full_way(amplifier: Table<'_>) -> bool {
-    amplifier.has_any(&["transformer", "rectifier", "filter"])
 }
 
 /// Reads output valves and, where the supply is stated the full way, its circuit.
@@ -113,32 +109,6 @@ pub(super) fn read_supply<'a>(
         unlikely::warn(circuit, &tables);
     }
     ReadSupply { nodes, circuit: circuit.map(Some), output: stage, output_table, cold: cold.map(Some) }
-}
-
-/// The tables of the full way, opened.
-pub(super) struct FullWay<'a> {
-    pub(super) transformer: Option<Table<'a>>,
-    pub(super) rectifier: Option<Table<'a>>,
-    pub(super) filter: Vec<Table<'a>>,
-    pub(super) loads: Vec<Table<'a>>,
-    pub(super) heater: Option<Table<'a>>,
-    pub(super) dropper: Option<Table<'a>>,
-}
-
-impl<'a> FullWay<'a> {
-    fn open(amplifier: Table<'a>) -> Self {
-        for needed in ["transformer", "rectifier", "filter"] {
-            amplifier.need(needed);
-        }
-        FullWay {
-            transformer: amplifier.table("transformer", "[amplifier.transformer]", TRANSFORMER),
-            rectifier: amplifier.table("rectifier", "[amplifier.rectifier]", RECTIFIER),
-            filter: amplifier.tables("filter", "[[amplifier.filter]]", FILTER),
-            loads: amplifier.tables("load", "[[amplifier.load]]", LOAD),
-            heater: amplifier.table("heater", "[amplifier.heater]", HEATER),
-            dropper: amplifier.table("dropper", "[amplifier.dropper]", DROPPER),
-        }
-    }
 }
 
 /// Nothing where there is no table, else what it reads to; the outer `None` is a complaint.

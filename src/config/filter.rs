@@ -1,6 +1,6 @@
 //! `[[amplifier.filter]]` and `[amplifier.dropper]`: what stands between the rectifier and the nodes.
 
-use super::references::complain_of_doubles;
+use super::names::complain_of_doubles;
 use super::table::{Bounds, Keys, Table};
 use crate::supply::{Capacitor, Dropper, Section, SeriesPart};
 

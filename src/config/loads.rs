@@ -1,9 +1,8 @@
 //! What the rail feeds: output valves, other loads, bleeders; and the heater winding.
 
-use super::amplifier::HIGHEST_RAIL_V;
-use super::references::expect_known;
+use super::names::expect_known;
 use super::site::{Bias, BiasFrom, MeasuredSupply, OutputStage};
-use super::table::{Bounds, Keys, Table};
+use super::table::{Bounds, HIGHEST_RAIL_V, Keys, Table};
 use super::transformer::MAINS_V;
 use crate::supply::{Heater, Load, Loading};
 

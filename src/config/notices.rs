@@ -3,8 +3,8 @@
 use std::path::Path;
 use std::time::Duration;
 
+use super::names::complain_of_doubles;
 use super::nearest::nearest;
-use super::references::complain_of_doubles;
 use super::secret::SecretSource;
 use super::site::{AlarmOverride, Receiver, Route};
 use super::table::{Bounds, Keys, Table};

@@ -86,7 +86,8 @@ const SITE: Keys = &[
     ("wave", "{ third_pct = 1.0, fifth_pct = -3.0 }"),
 ];
 
-const STORE: Keys = &[("path", "\"railtide.db\""), ("commit_every", "\"10 s\"")];
+const STORE: Keys =
+    &[("path", "\"railtide.db\""), ("commit_every", "\"10 s\""), ("keep_readings", "\"400 days\"")];
 
 const WAVE: Keys = &[
     ("third_pct", "1.0"),
@@ -167,7 +168,11 @@ fn read_store(root: Table<'_>, folder: &Path, surroundings: &Surroundings<'_>) -
     let shortest = Duration::from_millis(100);
     let longest = Duration::from_secs(600);
     let commit_every = table.and_then(|t| t.key("commit_every").duration(shortest, longest));
+    let keep = table.map(|t| t.key("keep_readings")).filter(|entry| entry.peek() != Some("for ever"));
+    // An hour must be closed before it's let go; a century stands for any longer time.
+    let (least, most) = (Duration::from_secs(7200), Duration::from_secs(100 * 366 * 86_400));
     StoreSettings {
+        keep_readings: keep.and_then(|entry| entry.duration(least, most)),
         path: path.map_or_else(|| surroundings.default_store.clone(), |path| folder.join(path.value)),
         commit_every: commit_every.unwrap_or(Duration::from_secs(10)),
     }

@@ -4,9 +4,9 @@ use std::collections::HashMap;
 
 use super::amplifier::ReadAmplifier;
 use super::logger::Read;
-use super::nearest::nearest;
+use super::names::{complain_of_doubles, expect_known};
 use super::site::{Channel, LoggerSettings};
-use super::table::{Entry, Table};
+use super::table::Table;
 
 /// Complains about every name that is given twice and every one that names nothing.
 pub(super) fn check(
@@ -31,25 +31,6 @@ pub(super) fn check(
     for amplifier in amplifiers {
         check_nodes(amplifier, &channel_tables);
         warn_if_unknowable(amplifier, &channel_tables);
-    }
-}
-
-/// Complains wherever a later table has the same text under `key` as an earlier one.
-pub(super) fn complain_of_doubles(tables: &[Table<'_>], key: &'static str, name: &str) {
-    let mut seen = HashMap::new();
-    for table in tables {
-        let entry = table.key(key);
-        let Some(text) = entry.peek() else { continue };
-        match seen.get(text) {
-            Some(first) => {
-                let line = table.notes().line(*first);
-                entry
-                    .refuse::<()>(&format!("the {name} of line {line} has the same; expected another {key}"));
-            }
-            None => {
-                seen.insert(text, entry.span());
-            }
-        }
     }
 }
 
@@ -145,26 +126,4 @@ fn warn_if_unknowable(amplifier: &ReadAmplifier<'_>, channels: &[Table<'_>]) {
             "nothing says where its rails stand: it has no rail channel, no [amplifier.measured] and no circuit",
         );
     }
-}
-
-/// Whether `name` is one of `known`; if it isn't, complains `why` at `entry`, with what there is.
-pub(super) fn expect_known<'k>(
-    entry: Entry<'_>,
-    name: &str,
-    why: &str,
-    known: impl Iterator<Item = &'k str>,
-) -> bool {
-    let mut known: Vec<_> = known.collect();
-    if known.contains(&name) {
-        return true;
-    }
-    known.sort_unstable();
-    known.dedup();
-    let says = match nearest(name, known.iter().copied()) {
-        Some(near) => format!("{why}; did you mean \"{near}\"?"),
-        None if known.is_empty() => why.to_owned(),
-        None => format!("{why}; there are {}", known.join(", ")),
-    };
-    entry.refuse::<()>(&says);
-    false
 }

@@ -63,6 +63,8 @@ pub struct StoreSettings {
     pub path: PathBuf,
     /// How long readings may wait in memory before they are committed.
     pub commit_every: Duration,
+    /// How long readings are kept; `None`: for ever. Intervals, alarms and fits always are.
+    pub keep_readings: Option<Duration>,
 }
 
 /// One logger.

@@ -12,6 +12,9 @@ use super::nearest::nearest;
 /// The keys that a table knows, each with a value that would be right, as written in TOML.
 pub(super) type Keys = &'static [(&'static str, &'static str)];
 
+/// Highest rail that is believed, V.
+pub(super) const HIGHEST_RAIL_V: f64 = 5000.0;
+
 /// One table of the file, whose unknown keys have been complained about.
 #[derive(Clone, Copy)]
 pub(super) struct Table<'a> {

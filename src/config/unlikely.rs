@@ -1,6 +1,6 @@
 //! Warnings about a circuit that is possible but unlikely, as far as it can be judged without solving it.
 
-use super::circuit::FullWay;
+use super::full_way::FullWay;
 use super::table::Table;
 use super::valves::{Rectifier, rectifier};
 use crate::supply::{Circuit, Device, Load, RectifierCircuit, SeriesPart};

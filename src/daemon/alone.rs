@@ -11,7 +11,8 @@ pub fn apply_alone(site: &Site, _lock: &Lock, clock: Clock, request: &Request) -
     let mut store = Store::open(&site.store.path, &OpenOptions::default())?;
     let ids = store.register_channels(&super::channel_specs(site))?;
     let now = clock.now();
-    let mut watch = Watch::new(site, &ids, &super::projectors(site), super::remembered(&store)?.0, now);
+    let projectors = super::projectors(site, &store)?;
+    let mut watch = Watch::new(site, &ids, &projectors, super::remembered(&store)?.0, now);
     let (decided, answer) = watch.request(request, now);
     store.commit(&Batch {
         alarms: decided.alarms,

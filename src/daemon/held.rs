@@ -1,7 +1,7 @@
 //! What has been decided but isn't in the record yet: kept in bounded memory until a commit succeeds.
 
 use crate::alarm::{Notice, Outcome};
-use crate::store::{Answer, Batch, Store, StoreError};
+use crate::store::{Answer, Batch, PlacedSession, Store, StoreError, WaitingReading};
 use crate::watch::Decided;
 
 /// More readings than this are not held: two channels at 1 Hz for about two and a half days (24 bytes each).
@@ -30,6 +30,19 @@ impl Held {
         }
     }
 
+    /// Adds readings whose time isn't known yet.
+    pub(super) fn add_waiting(&mut self, waiting: Vec<WaitingReading>) {
+        self.batch.waiting.extend(waiting);
+        let excess = self.batch.waiting.len().saturating_sub(MOST_READINGS);
+        self.batch.waiting.drain(..excess);
+        self.let_go += excess as u64;
+    }
+
+    /// Adds runs whose time has become known.
+    pub(super) fn add_placed(&mut self, placed: impl IntoIterator<Item = PlacedSession>) {
+        self.batch.placed.extend(placed);
+    }
+
     /// Adds what came of a delivery.
     pub(super) fn add_outcome(&mut self, outcome: Outcome) {
         self.batch.outcomes.push(outcome);
@@ -51,7 +64,7 @@ impl Held {
 
     /// How many readings wait.
     pub(super) fn readings(&self) -> usize {
-        self.batch.readings.len()
+        self.batch.readings.len() + self.batch.waiting.len()
     }
 
     /// How many readings had to be let go since the last commit that worked.

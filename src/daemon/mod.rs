@@ -1,11 +1,13 @@
 //! The daemon: starts the loggers' threads, the notice worker and the walk, joins them, stops them.
 //!
-//! One task walks every reading through the house ([`walk`]): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
+//! One task walks every reading through the house (the module `walk`): serial port ─ logger ─▶ time ─▶ watch ─▶ held ─▶ store
 //! ─▶ notice. Loggers and the notice worker speak to it over bounded channels and know nothing of one another.
 
 mod alone;
+mod early;
 mod held;
 mod hush;
+mod upkeep;
 mod walk;
 
 use std::future::Future;
@@ -14,15 +16,16 @@ use std::time::Duration;
 use tokio::sync::mpsc;
 
 use crate::clock::{Clock, TimeBase};
-use crate::config::Site;
+use crate::config::{Amplifier, Site};
 use crate::logger::{self, PortHandle};
 use crate::notice::{NoticeError, Waiting, Worker};
-use crate::store::{self, ChannelSpec, Lock, OpenOptions, Store, StoreError};
+use crate::store::{self, Batch, ChannelSpec, Lock, OpenOptions, Store, StoreError};
 use crate::supply::Projector;
-use crate::watch::{self, Watch, projector};
+use crate::watch::{self, Watch, projecting, valid_fit};
 
 pub use alone::apply_alone;
 
+use early::Early;
 use walk::Walk;
 
 /// Delays are looked at this often when no reading comes.
@@ -63,8 +66,10 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     let ids = store.register_channels(&channel_specs(site))?;
     let (remembered, restored) = remembered(&store)?;
     let now = clock.now();
-    let watch = Watch::new(site, &ids, &projectors(site), remembered, now);
+    let watch = Watch::new(site, &ids, &projectors(site, &store)?, remembered, now);
     let time = TimeBase::new(now, restored.newest);
+    let (early, placed) = Early::begin(&clock, &time, &restored);
+    store.commit(&Batch { placed, ..Batch::default() })?;
 
     let (outcome_tx, mut outcomes) = mpsc::channel(64);
     let worker = Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcome_tx)?;
@@ -80,7 +85,7 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     drop(event_tx);
     tracing::info!(database = %site.store.path.display(), "railtide is watching {}", site.name);
 
-    let mut walk = Walk::new(site, clock.clone(), time, watch, store, worker);
+    let mut walk = Walk::new(site, clock.clone(), time, early, watch, store, worker);
     tokio::pin!(shutdown);
     let mut next_tick = now.mono + TICK;
     loop {
@@ -128,8 +133,17 @@ pub async fn run(site: &Site, clock: Clock, shutdown: impl Future<Output = ()>) 
     Ok(())
 }
 
-fn projectors(site: &Site) -> Vec<Option<Projector>> {
-    site.amplifiers.iter().map(projector).collect()
+/// What each amplifier's rails are projected by: its newest fit that holds, its circuit, or its measured pair.
+fn projectors(site: &Site, store: &Store) -> Result<Vec<Option<Projector>>, StoreError> {
+    let of = |amplifier: &Amplifier| {
+        let fits = store.fits(&amplifier.name)?;
+        let projecting = projecting(amplifier, valid_fit(amplifier, &fits, site.time_zone));
+        if let Some(trouble) = projecting.trouble {
+            tracing::warn!("{trouble}");
+        }
+        Ok(projecting.projector)
+    };
+    site.amplifiers.iter().map(of).collect()
 }
 
 fn stop_ports(ports: Vec<PortHandle>) {

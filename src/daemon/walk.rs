@@ -11,8 +11,10 @@ use crate::quantity::{Moment, Mono};
 use crate::store::{Answer, PendingRequest, Store, StoreError};
 use crate::watch::{Decided, Watch};
 
+use super::early::Early;
 use super::held::Held;
 use super::hush::Hush;
+use super::upkeep::Upkeep;
 
 /// After a commit that failed the next one is tried no sooner than this.
 const RETRY_COMMIT: Duration = Duration::from_secs(2);
@@ -21,6 +23,7 @@ const RETRY_COMMIT: Duration = Duration::from_secs(2);
 pub(super) struct Walk {
     clock: Clock,
     time: TimeBase,
+    early: Early,
     watch: Watch,
     held: Held,
     store: Store,
@@ -31,6 +34,7 @@ pub(super) struct Walk {
     store_failed: bool,
     /// True until requests that were put before the start have been looked for.
     requests_unread: bool,
+    upkeep: Upkeep,
     hush: Hush,
 }
 
@@ -39,14 +43,17 @@ impl Walk {
         site: &Site,
         clock: Clock,
         time: TimeBase,
+        early: Early,
         watch: Watch,
         store: Store,
         notices: WorkerHandle,
     ) -> Self {
-        let commit_at = clock.now().mono + site.store.commit_every;
+        let start = clock.now().mono;
+        let commit_at = start + site.store.commit_every;
         Walk {
             clock,
             time,
+            early,
             watch,
             held: Held::default(),
             store,
@@ -56,6 +63,7 @@ impl Walk {
             commit_at,
             store_failed: false,
             requests_unread: true,
+            upkeep: Upkeep::new(start, site.store.keep_readings),
             hush: Hush::default(),
         }
     }
@@ -99,6 +107,16 @@ impl Walk {
         let decided = self.watch.tick(now);
         self.answer_requests(now);
         self.settle(decided);
+        if !self.store_failed
+            && let Err(error) = self.upkeep.turn(&mut self.store, now)
+        {
+            self.log_store_failure(&error, now.mono);
+        }
+        match self.upkeep.room(&self.store, now) {
+            Ok(Some(room)) => self.watch.set_room(room),
+            Ok(None) => {}
+            Err(error) => self.log_store_failure(&error, now.mono),
+        }
         for (what, times) in self.hush.overdue(now.mono) {
             tracing::warn!("{what} ({times} times more)");
         }
@@ -119,12 +137,13 @@ impl Walk {
 
     /// Holds what was decided, commits it when it's urgent or due, and only then tells receivers. If the commit
     /// fails, they are told at once from memory, marked "not recorded".
-    fn settle(&mut self, decided: Decided) {
+    fn settle(&mut self, mut decided: Decided) {
         let urgent = !decided.journal.is_empty();
         for entry in &decided.journal {
             log_transition(entry);
         }
         let mut notices = decided.notices.clone();
+        self.held.add_waiting(self.early.hold_back(&self.time, &mut decided.readings));
         self.held.add(decided);
         if urgent || self.clock.now().mono >= self.commit_at {
             let recorded = self.commit();
@@ -193,6 +212,7 @@ impl Walk {
                 "the host's clock has stepped; delays are not affected, readings are flagged until it has caught up"
             );
         }
+        self.held.add_placed(self.early.look(&self.clock, &self.time));
     }
 
     /// The present moment with UTC as readings are labelled.
@@ -293,28 +313,47 @@ webhook = "http://127.0.0.1:9/"
 
     impl Scene {
         fn new() -> Self {
-            let folder = tempfile::tempdir().unwrap();
+            Scene::with(HALL)
+        }
+
+        fn with(config: &str) -> Self {
+            Scene::at(config, tempfile::tempdir().unwrap(), 1_790_000_000_000)
+        }
+
+        /// The next run on the same record, by a host whose clock shows `start_ms`.
+        fn again(self, start_ms: i64) -> Self {
+            let Scene { folder, walk, .. } = self;
+            walk.finish();
+            Scene::at(HALL, folder, start_ms)
+        }
+
+        fn at(config: &str, folder: tempfile::TempDir, start_ms: i64) -> Self {
             let conditions: Vec<&str> = CONDITIONS.iter().map(|c| c.name).collect();
             let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
-            let site = Site::parse(HALL, &folder.path().join("railtide.toml"), &surroundings).unwrap();
-            let (clock, hand) = Clock::simulated(Utc(1_790_000_000_000));
+            let site = Site::parse(config, &folder.path().join("railtide.toml"), &surroundings).unwrap();
+            let (clock, hand) = Clock::simulated(Utc(start_ms));
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
             let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
-            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site), remembered, clock.now());
+            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site, &store).unwrap(), remembered, clock.now());
             let time = TimeBase::new(clock.now(), restored.newest);
+            let (early, placed) = Early::begin(&clock, &time, &restored);
+            store.commit(&crate::store::Batch { placed, ..Default::default() }).unwrap();
             let (outcomes, _) = tokio::sync::mpsc::channel(64);
             let worker =
                 Worker::spawn(site.receivers.clone(), site.time_zone, clock.clone(), outcomes).unwrap();
-            let walk = Walk::new(&site, clock, time, watch, store, worker);
+            let walk = Walk::new(&site, clock, time, early, watch, store, worker);
             Scene { folder, walk, hand, lines: 0 }
         }
 
-        /// One line a second for `seconds`.
+        /// One line a second for `seconds`, with a little noise, as no channel that lives is without.
         fn mains(&mut self, volts: f64, seconds: u64) {
             for _ in 0..seconds {
                 self.hand.advance(Duration::from_secs(1));
-                let sample = Sample { logger_ms: Some(self.lines * 1000), values: vec![(0, volts)] };
+                let sample = Sample {
+                    logger_ms: Some(self.lines * 1000),
+                    values: vec![(0, volts + (self.lines % 7) as f64 * 0.01)],
+                };
                 self.lines += 1;
                 let received = self.walk.clock.now();
                 self.walk.take(FromLogger { logger: 0, received, what: LoggerEvent::Sample(sample) });
@@ -347,6 +386,17 @@ webhook = "http://127.0.0.1:9/"
         assert_eq!(scene.readings(), 21, "the alarm of the eleventh high second took everything with it");
         assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
         assert!(scene.outbox()[0].notice.recorded);
+    }
+
+    #[tokio::test]
+    async fn hours_are_closed_as_time_goes_by_and_old_ones_let_go_where_the_owner_wants_that() {
+        let mut scene = Scene::with(&HALL.replace("commit_every", "keep_readings = \"2h\"\ncommit_every"));
+        scene.mains(226.0, 5 * 3600);
+        let hours = scene.number("SELECT count(*) FROM block");
+        assert!((2..=3).contains(&hours), "{hours} hours of readings are kept");
+        assert!(scene.readings() <= 2 * 3600, "closed hours leave no rows behind");
+        let intervals = scene.number("SELECT count(*) FROM interval");
+        assert!((24..=30).contains(&intervals), "intervals stay: {intervals}");
     }
 
     #[tokio::test]
@@ -384,6 +434,47 @@ webhook = "http://127.0.0.1:9/"
         scene.mains(238.0, 12);
         assert_eq!(scene.number("SELECT count(*) FROM journal"), 1);
         assert_eq!(scene.outbox().len(), 1);
+    }
+
+    #[tokio::test]
+    async fn before_the_clock_is_set_readings_wait_alarms_work_and_then_each_gets_its_true_time() {
+        let start = 1_790_000_000_000;
+        let mut scene = Scene::new();
+        scene.mains(226.0, 20);
+        // No battery clock: the host wakes up a day before what is stored.
+        let mut scene = scene.again(start - 86_400_000);
+        scene.mains(238.0, 30);
+        assert_eq!(scene.readings(), 20, "nothing new among the readings");
+        let waiting = scene.number("SELECT count(*) FROM waiting");
+        assert!((20..=30).contains(&waiting), "{waiting} wait");
+        assert_eq!(scene.number("SELECT count(*) FROM journal"), 1, "the alarm is raised all the same");
+        // The network comes: it is an hour later than when the record ends.
+        scene.hand.step_utc(86_400_000 + 3_600_000);
+        scene.mains(238.0, 10);
+        assert_eq!(scene.number("SELECT count(*) FROM waiting"), 0);
+        let (first, good) = (
+            scene.number("SELECT min(t_ms) FROM open WHERE mv > 230000"),
+            scene.number("SELECT count(*) FROM open WHERE mv > 230000 AND quality = 0"),
+        );
+        assert_eq!(
+            first as i64,
+            start + 3_600_000 + 1000,
+            "the first of them, a second after the host woke up"
+        );
+        assert_eq!(good + scene.walk.held.readings() as u64, 40);
+    }
+
+    #[tokio::test]
+    async fn what_a_run_left_waiting_is_kept_by_the_next_behind_the_record_and_flagged() {
+        let start = 1_790_000_000_000;
+        let mut scene = Scene::new();
+        scene.mains(226.0, 20);
+        let mut scene = scene.again(start - 86_400_000);
+        scene.mains(229.0, 20);
+        let scene = scene.again(start + 3_600_000);
+        assert_eq!(scene.number("SELECT count(*) FROM waiting"), 0);
+        assert_eq!(scene.number("SELECT count(*) FROM open WHERE quality = 1"), 20);
+        assert_eq!(scene.readings(), 40);
     }
 
     #[tokio::test]

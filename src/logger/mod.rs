@@ -7,6 +7,7 @@ mod decode;
 mod listening;
 mod listing;
 mod port;
+pub mod recording;
 pub mod simulated;
 mod stop;
 mod tide;

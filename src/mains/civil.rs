@@ -78,7 +78,8 @@ pub(super) fn moment(wall: NaiveDateTime, time_zone: Tz) -> Utc {
     Utc(found.map_or_else(|| wall.and_utc().timestamp_millis(), |at| at.timestamp_millis()))
 }
 
-fn start_of(date: NaiveDate, time_zone: Tz) -> Utc {
+/// The moment at which `date` begins in `time_zone`.
+pub fn start_of(date: NaiveDate, time_zone: Tz) -> Utc {
     moment(date.and_time(chrono::NaiveTime::MIN), time_zone)
 }
 

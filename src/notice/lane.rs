@@ -4,8 +4,8 @@ use std::collections::{BTreeMap, HashSet, VecDeque};
 use std::time::Duration;
 
 use super::Waiting;
+use super::answer::{Answer, Verdict};
 use super::backoff::next_attempt;
-use super::route::{Answer, Verdict};
 use crate::alarm::{Delivery, Notice, Outcome, Priority};
 use crate::quantity::{Moment, Mono, Utc};
 

@@ -9,6 +9,7 @@
 //!
 //! A kind of receiver is one file beside `webhook.rs` and one variant in `route.rs`.
 
+mod answer;
 mod backoff;
 mod json;
 mod lane;

@@ -5,8 +5,8 @@ use std::cmp::Reverse;
 use std::collections::VecDeque;
 
 use super::Waiting;
+use super::answer::Answer;
 use super::lane::{Hold, Lane, ReceiverStatus};
-use super::route::Answer;
 use crate::alarm::{Delivery, Notice, Outcome};
 use crate::quantity::{Moment, Mono, Utc};
 
@@ -102,7 +102,7 @@ mod tests {
 
     use super::*;
     use crate::alarm::{AlarmKey, Facts, NoticeKind, Priority};
-    use crate::notice::route::Verdict;
+    use crate::notice::answer::Verdict;
 
     fn waiting(id: u64, receiver: &str, priority: Priority) -> Waiting {
         let notice = Notice {

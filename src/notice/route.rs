@@ -1,10 +1,9 @@
 //! What every kind of receiver has in common: a notice is rendered to bytes once, the bytes are delivered, and the
 //! receiver's answer is judged. A new kind is one file with these two functions and one variant here.
 
-use std::time::Duration;
-
 use chrono_tz::Tz;
 
+use super::answer::Answer;
 use super::webhook::Webhook;
 use super::{NoticeError, json};
 use crate::alarm::Notice;
@@ -39,32 +38,4 @@ impl Sender {
             Sender::Webhook(webhook) => webhook.deliver(&notice.idempotency_key, body, clock).await,
         }
     }
-}
-
-/// How one attempt ended.
-#[derive(Clone, Debug, PartialEq, Eq)]
-pub(super) struct Answer {
-    pub(super) verdict: Verdict,
-    /// One line for people, without a secret in it.
-    pub(super) said: String,
-}
-
-/// What an answer means for the notice.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
-pub(super) enum Verdict {
-    /// The receiver has it.
-    Taken,
-    /// It isn't there or isn't able; it will be, some day.
-    Later {
-        /// The wait that it asked for.
-        retry_after: Option<Duration>,
-    },
-    /// It says no, and would go on saying it until something is changed on one side: after `allowed` such answers
-    /// the notice is given up.
-    Refused {
-        /// How many refusals a notice is worth.
-        allowed: u32,
-    },
-    /// It says that it will never take any.
-    Gone,
 }

@@ -20,7 +20,7 @@ use reqwest::{Client, Response, StatusCode, Url};
 use secrecy::{ExposeSecret, SecretString};
 
 use super::NoticeError;
-use super::route::{Answer, Verdict};
+use super::answer::{Answer, Verdict};
 use super::secret::resolve;
 use crate::clock::Clock;
 use crate::config::SecretSource;

@@ -8,9 +8,10 @@ use tokio::sync::{Notify, mpsc, watch};
 use tokio::task::JoinSet;
 
 use super::NoticeError;
+use super::answer::{Answer, Verdict};
 use super::lane::{Hold, ReceiverStatus};
 use super::queue::Queue;
-use super::route::{Answer, Sender, Verdict};
+use super::route::Sender;
 use crate::alarm::{Delivery, Notice, Outcome};
 use crate::clock::Clock;
 use crate::config::Receiver;

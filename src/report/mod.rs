@@ -4,6 +4,7 @@
 //! Pure: everything is written into a given writer; no clock, no file, no socket.
 
 mod alarms;
+pub mod export;
 mod notice;
 mod standing;
 mod time;

@@ -126,6 +126,7 @@ fn standing(facts: &Facts, tense: Tense) -> Option<String> {
     let verb = match (facts.unit.as_str(), facts.source.as_str(), tense) {
         ("s", _, Tense::Now) => "has lasted",
         ("s", _, Tense::Past) => "lasted",
+        ("days", _, _) => "has room left for",
         (_, "projected", _) if facts.proved_on == Some(true) => "is taken to stand at",
         (_, "projected", _) => "would stand at",
         _ => "stands at",

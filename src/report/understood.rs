@@ -19,6 +19,9 @@ pub fn understood_text(site: &Site, rails: &[RailWatch], out: &mut impl fmt::Wri
         site.store.path.display(),
         span(site.store.commit_every)
     )?;
+    if let Some(keep) = site.store.keep_readings {
+        writeln!(out, "Readings are kept for {}; intervals, alarms and fits for ever.", span(keep))?;
+    }
     if site.loggers.is_empty() {
         writeln!(out, "No logger: `run` has nothing to read; the commands that need none work.")?;
     }

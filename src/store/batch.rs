@@ -67,6 +67,8 @@ pub struct PlacedSession {
     pub session: u32,
     /// UTC when its monotonic clock stood at zero.
     pub utc_of_zero: Utc,
+    /// Whether that is sure: then what was flagged for its time alone is good.
+    pub sure: bool,
 }
 
 /// What the record has met in its life that it could not simply keep.
@@ -78,7 +80,7 @@ pub struct Tallies {
     pub too_old: u64,
 }
 
-const DIFFERING: &str = "differing_duplicates";
+pub(super) const DIFFERING: &str = "differing_duplicates";
 const TOO_OLD: &str = "too_old";
 /// Readings before this time, ms, have been dropped; their intervals stay as they are.
 pub(super) const FROZEN_BEFORE: &str = "frozen_before_ms";
@@ -199,7 +201,10 @@ fn take_placed(tx: &Connection, placed: &PlacedSession) -> rusqlite::Result<Vec<
                 at: Utc(placed.utc_of_zero.0 + row.get::<_, i64>(0)?),
                 channel: ChannelId(row.get(1)?),
                 value: Millivolts(row.get(2)?),
-                quality: quality(row, 3)?,
+                quality: match quality(row, 3)? {
+                    Quality::ClockDoubtful if placed.sure => Quality::Good,
+                    other => other,
+                },
             })
         })?
         .collect::<rusqlite::Result<Vec<_>>>()?;

@@ -9,6 +9,7 @@ use rusqlite_migration::M;
 
 use super::error::StoreError;
 use super::schema;
+use crate::quantity::Utc;
 
 /// How long a writer waits for another process. Every transaction of ours is meant to end within 100 ms; this leaves
 /// room for a slow card and for a person's SQL shell.
@@ -28,6 +29,8 @@ pub struct Store {
     path: PathBuf,
     /// `PRAGMA data_version` when [`Store::changed_by_others`] last looked.
     seen_version: Cell<i64>,
+    /// Hours before this one are not closed: one of them has a damaged block.
+    pub(super) close_from: Utc,
 }
 
 impl Store {
@@ -89,7 +92,7 @@ impl Store {
 
     fn new(conn: Connection, path: &Path) -> Result<Store, StoreError> {
         conn.set_prepared_statement_cache_capacity(64);
-        let store = Store { conn, path: path.into(), seen_version: Cell::new(0) };
+        let store = Store { conn, path: path.into(), seen_version: Cell::new(0), close_from: Utc(0) };
         store.changed_by_others()?;
         Ok(store)
     }

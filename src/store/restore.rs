@@ -5,7 +5,7 @@ use std::collections::BTreeMap;
 use super::error::StoreError;
 use super::open::Store;
 use crate::alarm::{AlarmRecord, Notice};
-use crate::quantity::Utc;
+use crate::quantity::{Mono, Utc};
 use crate::reading::{ChannelId, Reading};
 
 /// Where the last run left off.
@@ -23,6 +23,8 @@ pub struct Restored {
     pub latest: BTreeMap<ChannelId, Reading>,
     /// The time of the newest reading of all: a clock that shows less can't be trusted.
     pub newest: Option<Utc>,
+    /// Runs that ended before their time was known, each with the first monotonic time of what it left waiting.
+    pub left_waiting: Vec<(u32, Mono)>,
 }
 
 /// A notice that waits to be delivered.
@@ -56,7 +58,15 @@ impl Store {
                 .collect(),
             newest: latest.values().map(|reading: &Reading| reading.at).max(),
             latest,
+            left_waiting: self.left_waiting().map_err(|e| self.fault(e))?,
         })
+    }
+
+    fn left_waiting(&self) -> rusqlite::Result<Vec<(u32, Mono)>> {
+        self.conn
+            .prepare_cached("SELECT session, min(mono_ms) FROM waiting GROUP BY session ORDER BY session")?
+            .query_map([], |row| Ok((row.get(0)?, Mono(row.get::<_, i64>(1)? as u64))))?
+            .collect()
     }
 
     fn next(&self, sql: &str) -> Result<u64, StoreError> {

@@ -3,7 +3,6 @@
 use std::path::{Path, PathBuf};
 
 use rusqlite::Connection;
-use rusqlite::backup::Backup;
 use rusqlite_migration::{M, Migrations};
 
 use super::error::StoreError;
@@ -60,9 +59,6 @@ fn copy_before_migration(conn: &Connection, path: &Path, found: usize) -> Result
     let mut name = path.as_os_str().to_owned();
     name.push(format!(".version-{found}"));
     let copy = PathBuf::from(name);
-    let fault = |e| StoreError::from_sqlite(&copy, e);
-    let mut target = Connection::open(&copy).map_err(fault)?;
-    // All pages in one step: nobody else writes, the caller holds the lock.
-    Backup::new(conn, &mut target).and_then(|backup| backup.step(-1)).map_err(fault)?;
+    super::copy::copy(conn, &copy)?;
     Ok(copy)
 }

@@ -7,9 +7,12 @@ mod circuit;
 mod curve;
 mod describe;
 mod device;
+mod discharge;
 mod doubt;
 #[cfg(test)]
 mod exact;
+mod findings;
+pub mod fit;
 mod measures;
 mod mesh;
 mod monotone;
@@ -36,6 +39,10 @@ pub use circuit::{
 };
 pub use curve::{Measured, RailCurve, SolvedCurve};
 pub use options::{SolveError, SolveOptions, Warm};
+pub use discharge::{Discharge, SAFE_V, discharge};
+pub use findings::{
+    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
+};
 pub use projection::Grid;
 pub use solver::Solver;
 pub use steady::{DropperState, NodeState, PowerBalance, SteadyState, Work, steady_state, sweep};

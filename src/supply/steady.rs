@@ -1,8 +1,9 @@
 //! The supply's periodic steady state at one mains voltage and loading.
 
 use super::circuit::{Circuit, Loading};
-use super::options::{SolveError, SolveOptions, Warm};
-use super::solver::Solver;
+use super::options::Warm;
+pub(super) use super::options::{SolveError, SolveOptions};
+pub(super) use super::solver::Solver;
 
 /// One node in the steady state.
 #[derive(Clone, Debug, PartialEq)]

@@ -44,7 +44,7 @@ impl WatchedChannel {
         let volts = raw_v * self.config.gain + self.config.offset_v;
         let value = Millivolts::from_volts(volts)?;
         let stuck = self.is_stuck(value, now);
-        let quality = if !self.is_plausible(volts) {
+        let quality = if !is_plausible(self.config.quantity, volts, self.declared_v) {
             Quality::OutOfRange
         } else if stuck {
             Quality::Stuck
@@ -63,13 +63,6 @@ impl WatchedChannel {
     pub(super) fn fresh(&self, now: Mono) -> Option<Uncertain> {
         let (at, volts) = self.latest?;
         (now.since(at) <= fresh_for(self.config.sample_period)).then(|| uncertain(&self.config, volts))
-    }
-
-    fn is_plausible(&self, volts: f64) -> bool {
-        match self.config.quantity {
-            ChannelQuantity::MainsRms => (0.0..=2.0 * self.declared_v).contains(&volts),
-            ChannelQuantity::Rail => RAIL_RANGE_V.contains(&volts),
-        }
     }
 
     fn is_stuck(&mut self, value: Millivolts, now: Mono) -> bool {
@@ -93,6 +86,14 @@ impl WatchedChannel {
                 false
             }
         }
+    }
+}
+
+/// Whether `volts` can be a value of `quantity` at all, where the mains is declared `declared_v`.
+pub fn is_plausible(quantity: ChannelQuantity, volts: f64, declared_v: f64) -> bool {
+    match quantity {
+        ChannelQuantity::MainsRms => (0.0..=2.0 * declared_v).contains(&volts),
+        ChannelQuantity::Rail => RAIL_RANGE_V.contains(&volts),
     }
 }
 

@@ -5,20 +5,26 @@
 //! memory; whoever drives it commits what it [`Decided`] before telling anybody.
 
 mod channel;
+mod faults;
+mod findings;
 mod ledger;
 mod parts;
+mod projecting;
 mod rail;
 
-pub use channel::{fresh_for, uncertain};
+pub use channel::{fresh_for, is_plausible, uncertain};
+pub use findings::findings;
 pub use parts::{CapacitorWatch, PartWatch};
+pub use projecting::{Projecting, projecting, valid_fit};
 pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches};
 
 use std::time::Duration;
 
 use crate::alarm::{
-    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction, State,
+    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction,
+    RoomFigures, State,
 };
-use crate::config::{Amplifier, Site};
+use crate::config::Site;
 use crate::quantity::{Moment, Mono};
 use crate::reading::{ChannelId, Reading, Stamp};
 use crate::supply::Projector;
@@ -69,6 +75,7 @@ pub struct Watch {
     channels: Vec<WatchedChannel>,
     rails: Vec<RailWatch>,
     parts: Vec<PartWatch>,
+    room: Option<RoomFigures>,
     ledger: Ledger,
 }
 
@@ -79,12 +86,6 @@ struct WatchedLogger {
     sample_period: Duration,
     last_line: Mono,
     disconnected: Option<String>,
-}
-
-/// The projector of an amplifier from its config alone: the short way, if that is stated.
-pub fn projector(amplifier: &Amplifier) -> Option<Projector> {
-    let measured = amplifier.measured.as_ref()?;
-    Some(Projector::from_measured(&measured.node, measured.loading, measured.pair.clone()))
 }
 
 impl Watch {
@@ -125,6 +126,7 @@ impl Watch {
             channels,
             rails: rail_watches(site, projectors),
             parts: part_watches(site, projectors),
+            room: None,
             ledger: Ledger::new(site, restored),
         }
     }
@@ -146,6 +148,11 @@ impl Watch {
     /// Learns that a logger's port is not open, and why.
     pub fn disconnected(&mut self, logger: usize, why: String) {
         self.loggers[logger].disconnected = Some(why);
+    }
+
+    /// Learns how much room there is for the record.
+    pub fn set_room(&mut self, room: RoomFigures) {
+        self.room = Some(room);
     }
 
     /// Lets time pass: delays run out, figures grow old, silence is noticed.
@@ -185,6 +192,7 @@ impl Watch {
                 })
                 .collect(),
             rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
+            room: self.room,
             ..Figures::default()
         };
         for part in &self.parts {

@@ -4,11 +4,11 @@
 use crate::alarm::PartFigures;
 use crate::config::{Amplifier, ColdStart, OutputStage, Rating, Standby, output_valve};
 use crate::quantity::Uncertain;
-use crate::supply::{Circuit, Dropper, Loading, Projector, RailCurve};
+use crate::supply::{
+    CORE_LIMIT, Circuit, Finding, Loading, Projector, RailCurve, core_ratio,
+};
 
-/// A core that is driven this much over what it was wound for runs hot and hums (rule of this tool; no published
-/// source). No dropper in the rail helps it: a tap or a bucking winding does.
-const CORE_LIMIT: f64 = 1.06;
+use super::faults::{Fault, faults, suspect};
 
 /// IEC 60384-4 (from memory): an electrolytic's surge voltage over its rated voltage, for rare and short events.
 fn surge_v(rated_v: f64) -> f64 {
@@ -33,6 +33,7 @@ pub struct PartWatch {
 struct Anode {
     stage: OutputStage,
     limit_w: f64,
+    sheet_w: f64,
     type_name: String,
     curve: RailCurve,
 }
@@ -44,8 +45,8 @@ pub struct CapacitorWatch {
     pub node: String,
     /// The most that it may meet, V.
     pub limit_v: f64,
-    /// Why that: its working voltage, or its surge voltage for a brief warm-up.
-    pub why: &'static str,
+    /// Whether that is its surge voltage, for a brief warm-up, and not its working voltage, for standby.
+    pub surge: bool,
     /// The unloaded rail at declared mains, V: over the limit, it is a finding and no alarm.
     pub at_declared: Uncertain,
     curve: RailCurve,
@@ -58,6 +59,9 @@ struct Band {
     node: String,
     idle: RailCurve,
     full: Option<RailCurve>,
+    /// Where it stands in standby, if a switch can keep it there.
+    standby: Option<RailCurve>,
+    faults: Vec<Fault>,
 }
 
 impl PartWatch {
@@ -76,23 +80,26 @@ impl PartWatch {
             let limit_w =
                 if sheet.rating == Rating::DesignCentre { 1.10 * sheet.anode_w } else { sheet.anode_w };
             let curve = curve(&stage.node, Loading::Idle)?;
-            Some(Anode { stage: stage.clone(), limit_w, type_name: sheet.type_name.clone(), curve })
+            let (sheet_w, type_name) = (sheet.anode_w, sheet.type_name.clone());
+            Some(Anode { stage: stage.clone(), limit_w, sheet_w, type_name, curve })
         });
         let capacitors = amplifier
             .circuit
             .iter()
             .flat_map(|circuit| cold_capacitors(circuit, amplifier.cold.as_ref()))
-            .filter_map(|(node, limit_v, why)| {
+            .filter_map(|(node, limit_v, surge)| {
                 let curve = curve(&node, Loading::Unloaded)?;
                 let at_declared = curve.project(Uncertain::new(declared_v, 0.0));
-                Some(CapacitorWatch { node, limit_v, why, at_declared, curve })
+                Some(CapacitorWatch { node, limit_v, surge, at_declared, curve })
             })
             .collect();
         let bands = rails
             .iter()
             .filter_map(|&(channel, node)| {
                 let idle = curve(node, Loading::Idle)?;
-                Some(Band { channel, node: node.to_owned(), idle, full: curve(node, Loading::Full) })
+                let standby = waits_in_standby(amplifier, node).then(|| curve(node, Loading::Unloaded)).flatten();
+                let faults = amplifier.circuit.iter().flat_map(|circuit| faults(circuit, node)).collect();
+                Some(Band { channel, node: node.to_owned(), idle, full: curve(node, Loading::Full), standby, faults })
             })
             .collect();
         let lowest_limit = amplifier.limits.iter().map(|l| l.max_v).fold(f64::INFINITY, f64::min);
@@ -141,10 +148,10 @@ impl PartWatch {
                 subject: format!("{}.{}", self.amplifier, capacitor.node),
                 value: rail.map(|r| r.volts),
                 u: rail.map(|r| r.u),
-                setpoint: capacitor.limit_v - self.guard_band * capacitor.at_declared.u,
+                setpoint: capacitor.setpoint_v(self.guard_band),
                 limit: Some(capacitor.limit_v),
                 suppressed: false,
-                note: capacitor.why.to_owned(),
+                note: capacitor.why().to_owned(),
             });
         }
         for band in &self.bands {
@@ -176,7 +183,7 @@ impl PartWatch {
     fn add_core(&self, mains: Option<Uncertain>, off: bool, figures: &mut crate::alarm::Figures) {
         let Some(circuit) = &self.circuit else { return };
         let transformer = &circuit.transformer;
-        let per_volt = transformer.wound_for_hz / circuit.frequency_hz / transformer.wound_for_v;
+        let per_volt = core_ratio(circuit, 1.0);
         figures.cores.push(PartFigures {
             subject: self.amplifier.clone(),
             value: mains.map(|m| m.volts * per_volt),
@@ -217,44 +224,65 @@ impl PartWatch {
     ) -> Option<PartFigures> {
         let both = mains.zip(measured).map(|(mains, measured)| {
             let idle = band.idle.project(mains);
+            let in_standby = band.standby.as_ref().is_some_and(|curve| {
+                let waits = curve.project(mains);
+                (measured.volts - waits.volts).abs() <= Uncertain::combine([measured.u, waits.u])
+            });
             let full = band.full.as_ref().map(|curve| curve.project(mains));
             let above = measured.volts - idle.volts;
             // With the full loading unknown nobody can say that a rail below idle is too low.
             let below = full.map_or(0.0, |full| full.volts - measured.volts);
             let reference = if above >= below { idle } else { full.unwrap_or(idle) };
-            (above.max(below), above, Uncertain::combine([measured.u, reference.u]))
+            let u = Uncertain::combine([measured.u, reference.u]);
+            let outside = if in_standby { 0.0 } else { above.max(below).max(0.0) };
+            let note = if outside > u { suspect(&band.faults, mains, measured) } else { String::new() };
+            (outside, u, note)
         });
         Some(PartFigures {
             subject: format!("{}.{}", self.amplifier, band.node),
-            value: both.map(|(distance, ..)| distance),
-            u: both.map(|(.., u)| u),
-            setpoint: both.map_or(0.0, |(.., u)| u),
+            value: both.as_ref().map(|(outside, ..)| *outside),
+            u: both.as_ref().map(|(_, u, _)| *u),
+            setpoint: both.as_ref().map_or(0.0, |(_, u, _)| *u),
             limit: None,
             suppressed: off,
-            note: both.map_or(String::new(), |(_, above, u)| self.suspect(above, u)),
+            note: both.map_or(String::new(), |(.., note)| note),
         })
     }
 
-    /// What a rail that stands `above` its projection may tell, where a dropper is fitted.
-    fn suspect(&self, above: f64, u: f64) -> String {
-        let dropper = self.circuit.as_ref().and_then(|c| c.dropper.as_ref());
-        let fits = |jump: f64, doubt: f64| (above - jump).abs() <= u.max(doubt);
-        match dropper {
-            Some(&Dropper::ReturnMosfet { zener_v, threshold_v, half_width_v, .. }) => {
-                let doubt = half_width_v + 2.0;
-                if fits(zener_v + threshold_v, doubt) {
-                    "it fits a dropper whose MOSFET has shorted: the whole drop is gone".to_owned()
-                } else if fits(zener_v, doubt) {
-                    "it fits a dropper whose zener has shorted: only about V_GS is left".to_owned()
-                } else {
-                    String::new()
-                }
-            }
-            Some(&Dropper::ReturnZener { zener_v, .. }) if fits(zener_v, 0.05 * zener_v) => {
-                "it fits a dropper whose zener has shorted".to_owned()
-            }
-            _ => String::new(),
+    /// The output valves' dissipation at idle with that mains, against their sheet.
+    pub(super) fn dissipation_at(&self, mains_v: f64) -> Option<Finding> {
+        let anode = self.anode.as_ref()?;
+        Some(Finding::Dissipation {
+            valve: anode.type_name.clone(),
+            heat_w: anode_w(&anode.stage, anode.curve.rail_v(mains_v)),
+            most_w: anode.sheet_w,
+        })
+    }
+}
+
+impl CapacitorWatch {
+    /// The limit less the guard band; the limit itself where the unloaded rail is within the guard band at declared
+    /// mains already, since an alarm is for what mains adds.
+    fn setpoint_v(&self, guard_band: f64) -> f64 {
+        let guarded_v = self.limit_v - guard_band * self.at_declared.u;
+        if self.at_declared.volts < guarded_v { guarded_v } else { self.limit_v }
+    }
+
+    fn why(&self) -> &'static str {
+        if self.surge {
+            "its surge voltage: the valves' warm-up is brief"
+        } else {
+            "its working voltage: in standby it waits at the full peak"
         }
+    }
+}
+
+/// Whether a standby switch leaves this node standing at the unloaded rail.
+fn waits_in_standby(amplifier: &Amplifier, node: &str) -> bool {
+    let Some(circuit) = &amplifier.circuit else { return false };
+    match amplifier.cold.as_ref().map(|cold| &cold.standby) {
+        Some(Standby::After(last)) => circuit.node(node) <= circuit.node(last),
+        _ => false,
     }
 }
 
@@ -264,10 +292,11 @@ fn anode_w(stage: &OutputStage, rail_v: f64) -> f64 {
     (rail_v - stage.cathode_v) * idle_a
 }
 
-/// (node, the most it may meet, why) of each capacitor with a rating that meets the unloaded rail.
-fn cold_capacitors(circuit: &Circuit, cold: Option<&ColdStart>) -> Vec<(String, f64, &'static str)> {
-    let standby = cold.map_or(&Standby::None, |c| &c.standby);
-    let last_waiting = match standby {
+/// (node, the most it may meet, whether that is its surge voltage) of each capacitor with a rating that meets the
+/// unloaded rail.
+fn cold_capacitors(circuit: &Circuit, cold: Option<&ColdStart>) -> Vec<(String, f64, bool)> {
+    let last_waiting = match cold.map_or(&Standby::None, |c| &c.standby) {
+        // The valves are warm by the time that the rail comes.
         Standby::HtAc => return Vec::new(),
         Standby::None => None,
         Standby::After(node) => circuit.node(node),
@@ -278,19 +307,11 @@ fn cold_capacitors(circuit: &Circuit, cold: Option<&ColdStart>) -> Vec<(String, 
         .enumerate()
         .filter_map(|(i, section)| {
             let rated_v = section.capacitor.as_ref()?.rated_v?;
-            Some(match last_waiting {
-                Some(last) if i <= last => (
-                    section.node.clone(),
-                    rated_v,
-                    "its working voltage: in standby it waits at the full peak",
-                ),
-                Some(_) => return None,
-                None => (
-                    section.node.clone(),
-                    surge_v(rated_v),
-                    "its surge voltage: the valves' warm-up is brief",
-                ),
-            })
+            match last_waiting {
+                Some(last) if i <= last => Some((section.node.clone(), rated_v, false)),
+                Some(_) => None,
+                None => Some((section.node.clone(), surge_v(rated_v), true)),
+            }
         })
         .collect()
 }

@@ -37,6 +37,63 @@ name = "phone"
 webhook = "http://127.0.0.1:1/"
 "#;
 
+const FULL: &str = r#"
+[site]
+name = "hall"
+time_zone = "Europe/Lisbon"
+[[logger]]
+name = "bench"
+port = "/dev/null"
+[[channel]]
+name = "mains"
+quantity = "mains_rms"
+[[channel]]
+name = "hall.reservoir"
+quantity = "rail"
+amplifier = "hall"
+node = "reservoir"
+[[receiver]]
+name = "phone"
+webhook = "http://127.0.0.1:1/"
+[[amplifier]]
+name = "hall"
+[amplifier.transformer]
+wound_for_v = 220
+secondary_v = 350
+source_ohm = 38
+[amplifier.rectifier]
+circuit = "bridge"
+device = "silicon"
+[[amplifier.filter]]
+node = "reservoir"
+capacitor_uf = 100
+rated_v = 500
+[amplifier.output]
+type = "KT66"
+count = 4
+idle_ma_each = 40
+full_ma_each = 75
+at_v = 450
+node = "reservoir"
+bias = "winding"
+[[amplifier.load]]
+node = "reservoir"
+bleeder_kohm = 220
+[amplifier.heater]
+nominal_v = 6.3
+[[amplifier.limit]]
+node = "reservoir"
+max_v = 500
+"#;
+
+/// The hall with its amplifier stated the full way (350 V, 38 Ω, a silicon bridge, 100 µF, four KT66), and `more` of
+/// the amplifier.
+pub(super) fn full_site(more: &str) -> Site {
+    let conditions: Vec<&str> = crate::alarm::CONDITIONS.iter().map(|c| c.name).collect();
+    let surroundings = Surroundings { conditions: &conditions, default_store: "hall.db".into() };
+    Site::parse(&format!("{FULL}{more}"), "railtide.toml".as_ref(), &surroundings).unwrap()
+}
+
 /// A site with one logger (mains, and the hall amplifier's reservoir), one limit and one receiver.
 pub(super) fn hall_site() -> Site {
     let conditions: Vec<&str> = crate::alarm::CONDITIONS.iter().map(|c| c.name).collect();
@@ -45,7 +102,7 @@ pub(super) fn hall_site() -> Site {
 }
 
 pub(super) fn projectors(site: &Site) -> Vec<Option<Projector>> {
-    site.amplifiers.iter().map(projector).collect()
+    site.amplifiers.iter().map(|amplifier| projecting(amplifier, None).projector).collect()
 }
 
 struct Evening {

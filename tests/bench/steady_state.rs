@@ -1,9 +1,13 @@
 //! One steady state against SciPy's stiff integrator on the same circuit in the same run, the three curves of a whole
-//! amplifier, and one projection: `cargo bench --bench steady_state` (needs python3; the first run fetches SciPy).
+//! amplifier, and one projection: `cargo bench --bench steady_state` (`tests/peers/setup` installs SciPy).
 //!
 //! Goals: a thousand times SciPy's speed at the same accuracy, 100 ms for the three curves, 100 ns for a projection.
 
 #![expect(clippy::print_stdout, reason = "a benchmark reports")]
+
+#[path = "../support/peers.rs"]
+#[expect(dead_code, reason = "only Python is needed")]
+mod peers;
 
 use std::hint::black_box;
 use std::process::Command;
@@ -79,59 +83,59 @@ fn amplifier() -> Circuit {
     circuit
 }
 
-/// Seconds and first mean of the reference's case at an integrator's tolerance; the median of five by time.
-fn reference(rtol: &str) -> (f64, f64) {
-    let run = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/reference/run");
-    let mut runs: Vec<(f64, f64)> = (0..5)
-        .map(|_| {
-            let out = Command::new(run)
-                .args(["--time", "bridge, one capacitor, resistor", "--rtol", rtol])
-                .output()
-                .expect("tests/reference/run starts");
-            assert!(out.status.success(), "{}", String::from_utf8_lossy(&out.stderr));
-            let row: serde_json::Value = serde_json::from_slice(&out.stdout).expect("a line of JSON");
-            (row["seconds"].as_f64().expect("seconds"), row["mean_v"].as_f64().expect("a mean"))
-        })
-        .collect();
+/// Seconds and first mean of the reference's case at an integrator's tolerance; the median of five by time. `None`
+/// where Python with SciPy is missing.
+fn reference(rtol: &str) -> Option<(f64, f64)> {
+    let script = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/reference/reference.py");
+    let mut runs = Vec::new();
+    for _ in 0..5 {
+        let out = Command::new(peers::python()?)
+            .args(["-B", script, "--time", "bridge, one capacitor, resistor", "--rtol", rtol])
+            .output()
+            .expect("Python starts");
+        assert!(out.status.success(), "{}", String::from_utf8_lossy(&out.stderr));
+        let row: serde_json::Value = serde_json::from_slice(&out.stdout).expect("a line of JSON");
+        runs.push((row["seconds"].as_f64().expect("seconds"), row["mean_v"].as_f64().expect("a mean")));
+    }
     runs.sort_by(|a, b| a.0.total_cmp(&b.0));
-    runs[2]
+    Some(runs[2])
 }
 
-fn main() {
-    let options = SolveOptions::default();
-    let (exact_s, exact_v) = reference("1e-9");
-    let (loose_s, loose_v) = reference("1e-4");
+/// One steady state from nothing, ours and the reference's, each pair about equally exact.
+fn one_steady_state() {
     let circuit = one_capacitor();
-    let off = |v: f64| 100.0 * (v / exact_v - 1.0).abs();
+    let exact = reference("1e-9");
+    let off = |v: f64| {
+        exact.map_or(String::new(), |(_, exact_v)| {
+            format!("   mean off by {:.5} %", 100.0 * (v / exact_v - 1.0).abs())
+        })
+    };
     println!("one steady state, one capacitor, from nothing");
-    let mut ours = Vec::new();
-    for steps in [COARSE, options.steps] {
+    for (steps, rtol) in [(COARSE, "1e-4"), (SolveOptions::default().steps, "1e-9")] {
         let options = SolveOptions { steps, ..SolveOptions::default() };
         let mut mean_v = 0.0;
-        let one = median(|| {
+        let ours = median(|| {
             for _ in 0..TIMES {
                 let found = steady_state(black_box(&circuit), 230.0, Loading::Idle, &options);
                 mean_v = found.expect("a steady state").nodes[0].mean_v;
             }
         }) / TIMES;
-        println!(
-            "  railtide, {steps:>3} steps {:>10.1} µs   mean off by {:.5} %",
-            one.as_secs_f64() * 1e6,
-            off(mean_v)
-        );
-        ours.push(one.as_secs_f64());
+        println!("  railtide, {steps:>3} steps {:>10.1} µs{}", ours.as_secs_f64() * 1e6, off(mean_v));
+        let theirs = if rtol == "1e-9" { exact } else { reference(rtol) };
+        if let Some((seconds, v)) = theirs {
+            let times = seconds / ours.as_secs_f64();
+            println!(
+                "  SciPy, rtol {rtol}    {:>10.1} µs{}   {times:.0} times as long",
+                seconds * 1e6,
+                off(v)
+            );
+        }
     }
-    for (name, seconds, v, ours) in
-        [("SciPy, rtol 1e-4", loose_s, loose_v, ours[0]), ("SciPy, rtol 1e-9", exact_s, exact_v, ours[1])]
-    {
-        println!(
-            "  {name:<19} {:>10.1} µs   mean off by {:.5} %   {:.0} times as long",
-            seconds * 1e6,
-            off(v),
-            seconds / ours
-        );
-    }
+}
 
+fn main() {
+    let options = SolveOptions::default();
+    one_steady_state();
     let circuit = amplifier();
     let mains_v: Vec<f64> = (0..91).map(|v| 185.0 + f64::from(v)).collect();
     let curves = median(|| {

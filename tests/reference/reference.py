@@ -1,5 +1,6 @@
 """Recomputes the reference: `reference.py` all of it into reference.json, `--check` all against what is kept there,
-`--cases 3 --check` three of them spread over the list, `--time NAME` the steady state of one, with its time. See supply.py."""
+`--cases 3 --check` three of them spread over the list, `--time NAME` the steady state of one, with its time.
+The method is in supply.py; the pinned libraries are those of tests/peers/requirements.txt."""
 
 import argparse
 import json

@@ -6,14 +6,19 @@
     reason = "each test program uses its own part of the bench"
 )]
 
+pub mod peers;
 pub mod receiver;
 
 use std::fmt::Write as _;
 use std::fs::File;
 use std::io::Write as _;
+use std::os::fd::OwnedFd;
+use std::os::unix::fs::OpenOptionsExt as _;
 use std::path::{Path, PathBuf};
 use std::process::{Child, Command, Output, Stdio};
 use std::time::{Duration, Instant};
+
+use nix::fcntl::OFlag;
 
 /// A state is waited for at most this long; generous, since timing never fails a test, only a state that never comes.
 pub const PATIENCE: Duration = Duration::from_secs(60);
@@ -30,21 +35,23 @@ pub struct Line {
 
 impl Line {
     pub fn new() -> Self {
-        let ends = nix::pty::openpty(None, None).expect("a pseudo-terminal");
-        let mut raw = nix::sys::termios::tcgetattr(&ends.slave).expect("its settings");
+        // Close-on-exec from the first moment: a child that inherited the near end would keep the line plugged in.
+        // Non-blocking, since a daemon that doesn't read must fail a test, not hang it.
+        let flags = OFlag::O_RDWR | OFlag::O_NOCTTY | OFlag::O_CLOEXEC | OFlag::O_NONBLOCK;
+        let near = nix::pty::posix_openpt(flags).expect("a pseudo-terminal");
+        nix::pty::grantpt(&near).expect("granted");
+        nix::pty::unlockpt(&near).expect("unlocked");
+        let device = PathBuf::from(nix::pty::ptsname_r(&near).expect("a named far end"));
+        let far = std::fs::OpenOptions::new()
+            .read(true)
+            .write(true)
+            .custom_flags(OFlag::O_NOCTTY.bits())
+            .open(&device)
+            .expect("its far end");
+        let mut raw = nix::sys::termios::tcgetattr(&far).expect("its settings");
         nix::sys::termios::cfmakeraw(&mut raw);
-        nix::sys::termios::tcsetattr(&ends.slave, nix::sys::termios::SetArg::TCSANOW, &raw).expect("raw");
-        // A daemon that doesn't read must fail a test, not hang it.
-        let flags = nix::fcntl::FcntlArg::F_SETFL(nix::fcntl::OFlag::O_NONBLOCK);
-        nix::fcntl::fcntl(&ends.master, flags).expect("a non-blocking near end");
-        let device = nix::unistd::ttyname(&ends.slave).expect("a named far end");
-        Line {
-            near: File::from(ends.master),
-            _far: File::from(ends.slave),
-            device,
-            seq: 0,
-            started: Instant::now(),
-        }
+        nix::sys::termios::tcsetattr(&far, nix::sys::termios::SetArg::TCSANOW, &raw).expect("raw");
+        Line { near: File::from(OwnedFd::from(near)), _far: far, device, seq: 0, started: Instant::now() }
     }
 
     /// The device that the daemon opens.

@@ -68,16 +68,16 @@ CREATE TABLE block (
 ) STRICT;
 CREATE INDEX block_of_channel ON block (channel, t_ms);
 
--- Ten minutes of one channel, aligned to UTC and named by their start. count: sound readings; doubtful: readings that
--- are not good, sound or not; flagged: doubtful or missing data (IEC 61000-4-30).
+-- Ten minutes of one channel, aligned to UTC and named by their start. count: sound readings; covered: which part of
+-- the ten minutes they stand for, 0 to 1; flagged: doubtful or missing data (IEC 61000-4-30). Ten minutes without a
+-- sound reading have no row.
 CREATE TABLE interval (
     key              INTEGER PRIMARY KEY,
-    rms_mv           REAL,
-    min_mv           INTEGER,
-    max_mv           INTEGER,
-    count            INTEGER NOT NULL,
-    doubtful         INTEGER NOT NULL,
-    sample_period_ms INTEGER NOT NULL CHECK (sample_period_ms > 0),
+    rms_mv           REAL NOT NULL,
+    min_mv           INTEGER NOT NULL,
+    max_mv           INTEGER NOT NULL,
+    count            INTEGER NOT NULL CHECK (count > 0),
+    covered          REAL NOT NULL,
     flagged          INTEGER NOT NULL CHECK (flagged IN (0, 1)),
     t_ms             INTEGER GENERATED ALWAYS AS (key >> 8) VIRTUAL,
     channel          INTEGER GENERATED ALWAYS AS (key & 255) VIRTUAL
@@ -182,7 +182,7 @@ FROM block b JOIN channel c ON c.id = b.channel;
 CREATE VIEW intervals AS
 SELECT strftime('%Y-%m-%dT%H:%M:%SZ', i.t_ms / 1000, 'unixepoch') AS start, c.name AS channel,
        i.rms_mv / 1000.0 AS rms_v, i.min_mv / 1000.0 AS min_v, i.max_mv / 1000.0 AS max_v, i.count,
-       i.count * i.sample_period_ms / 600000.0 AS coverage, i.flagged
+       i.covered, i.flagged
 FROM interval i JOIN channel c ON c.id = i.channel;
 
 CREATE VIEW alarms AS
