@@ -212,6 +212,21 @@ fn a_filter_that_rings_for_hundreds_of_periods_finds_its_steady_state() {
 }
 
 #[test]
+fn a_neighbours_state_shortens_the_search_and_changes_nothing() {
+    let circuit = amplifier();
+    let at = |mains_v: f64, warm| {
+        let options = SolveOptions { warm, ..SolveOptions::default() };
+        steady_state(&circuit, mains_v, Loading::Idle, &options).expect("a steady state")
+    };
+    let neighbour = at(229.0, None);
+    let (cold, warm) = (at(230.0, None), at(230.0, neighbour.warm().cloned()));
+    assert!(warm.work.walks < cold.work.walks, "{:?} and {:?}", warm.work, cold.work);
+    for (warm, cold) in warm.nodes.iter().zip(&cold.nodes) {
+        near(&warm.node, warm.mean_v, cold.mean_v, 2e-5);
+    }
+}
+
+#[test]
 fn the_work_stays_small() {
     // Walks through the period and steps in the last one: a slower solver shows here before anyone has a clock.
     let mut lines = Vec::new();

@@ -38,11 +38,11 @@ pub use circuit::{
     Section, SeriesPart, Transformer, Winding,
 };
 pub use curve::{Measured, RailCurve, SolvedCurve};
-pub use options::{SolveError, SolveOptions, Warm};
 pub use discharge::{Discharge, SAFE_V, discharge};
 pub use findings::{
     CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
 };
+pub use options::{SolveError, SolveOptions, Warm};
 pub use projection::Grid;
 pub use solver::Solver;
 pub use steady::{DropperState, NodeState, PowerBalance, SteadyState, Work, steady_state, sweep};
