@@ -259,8 +259,8 @@ fn the_work_stays_small() {
     amplifier     idle      5 walks, 130 steps; 91 mains: 114 walks
     amplifier     full      5 walks, 130 steps; 91 mains: 112 walks
     choke input   unloaded  8 walks, 129 steps; 91 mains: 100 walks
-    choke input   idle      5 walks, 129 steps; 91 mains: 104 walks
-    choke input   full      5 walks, 129 steps; 91 mains: 107 walks
+    choke input   idle      7 walks, 129 steps; 91 mains: 105 walks
+    choke input   full      7 walks, 129 steps; 91 mains: 108 walks
     valve, mosfet unloaded  8 walks, 130 steps; 91 mains: 102 walks
     valve, mosfet idle      4 walks, 130 steps; 91 mains: 97 walks
     valve, mosfet full      5 walks, 130 steps; 91 mains: 100 walks

@@ -12,6 +12,9 @@ use super::steady::{SteadyState, Work};
 /// How closely the first, rough solution is taken before the mesh is fitted to it.
 const ROUGH: f64 = 1e-4;
 
+/// Meshes that are fitted, each to what the last one showed, before a first solution is taken.
+const MOST_REFINEMENTS: usize = 4;
+
 /// Load that damps everything, as the source's resistance over the load's.
 const DAMPING_LOAD: f64 = 0.05;
 
@@ -100,8 +103,20 @@ impl<'a> Solver<'a> {
             .or_else(|_| self.solve_by_loads(mains_v, emf_v, &mesh))?;
         self.earlier = vec![Warm::new(mains_v, &rough)];
         self.mesh = None;
-        let (fine, work) = self.solve_on(mains_v, emf_v)?;
-        Ok((fine, Work { walks: rough.tries + work.walks, ..work }))
+        let mut walks = rough.tries;
+        let mut refinements = 0;
+        loop {
+            let (fine, work) = self.solve_on(mains_v, emf_v)?;
+            walks += work.walks;
+            let (conducts, overlaps) = (&fine.walk.conducts, &fine.walk.overlaps);
+            let suits = self.mesh.as_ref().is_some_and(|mesh| mesh.suits(self.span(), conducts, overlaps));
+            refinements += 1;
+            // Even steps show a needle of current no narrower than a step or two.
+            if suits || refinements == MOST_REFINEMENTS {
+                return Ok((fine, Work { walks, ..work }));
+            }
+            self.earlier = vec![Warm::new(mains_v, &fine)];
+        }
     }
 
     /// The long way round: under a load that damps everything the steady state is easily found, and from there the
