@@ -239,6 +239,22 @@ fn week(database: &Path, folder: &Path, store: &Store, ids: &[ChannelId], end: U
         ("the sqlite3 shell on plain rows", median(|| sqlite3(&shell, &plain, sql)))
     });
     show("a week of two channels as CSV with local times (goal 8)", ours, peer);
+    for (what, command) in [
+        ("a week's report from a year's record (goal 0.5 s)", vec!["week", "--from", &day(from), "--to", &day(end)]),
+        ("a profile of a year (goal 1 s)", vec!["profile", "--from", &day(Utc(START)), "--to", &day(end)]),
+    ] {
+        let taken = median(|| {
+            let status = Command::new(env!("CARGO_BIN_EXE_railtide"))
+                .args(&command)
+                .arg("--config")
+                .arg(folder.join("railtide.toml"))
+                .stdout(Stdio::null())
+                .status()
+                .unwrap();
+            assert!(status.success());
+        });
+        show(what, taken, None);
+    }
 }
 
 fn import(folder: &Path, days: i64) {
