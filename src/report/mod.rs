@@ -4,14 +4,23 @@
 //! Pure: everything is written into a given writer; no clock, no file, no socket.
 
 mod alarms;
+mod curve;
+mod curve_chart;
 pub mod export;
+mod findings;
+mod fit;
 mod notice;
 mod standing;
+mod supply;
 mod time;
 mod understood;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
+pub use curve::{CurveDropper, CurveNode, CurvePoint, CurveReport, curve_csv, curve_text};
+pub use curve_chart::curve_svg;
+pub use findings::finding_sentence;
+pub use fit::{Amperes, FitReport, Ohms, Volts, fit_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
-pub use understood::understood_text;
+pub use understood::{Understood, understood_text};

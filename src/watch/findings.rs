@@ -93,10 +93,11 @@ mod tests {
             of(site).into_iter().find(|f| matches!(f, Finding::Unloaded { .. })).expect("a rated capacitor")
         };
         let mut site = full_site("");
-        // 350 V at 220 V is 366 V at 230 V, peak 517 V less two diodes: under the surge voltage of 550 V.
+        // 350 V at 220 V peaks at 517.5 V at 230 V; two diodes and the closed form tan θ − θ = π·Rs/(2R) for 38 Ω and
+        // 220 kΩ (cos θ = 0.9956) leave 513.5 V: under the surge voltage of 550 V.
         let found = unloaded(&site);
         let Finding::Unloaded { rail_v, most_v, surge, .. } = found else { unreachable!() };
-        assert!((rail_v - 516.0).abs() < 2.0 && surge && !found.is_wrong(), "{found:?}");
+        assert!((rail_v - 513.5).abs() < 0.5 && surge && !found.is_wrong(), "{found:?}");
         assert!((most_v - 550.0).abs() < 1e-9, "1.10 times 500 V, IEC 60384-4 from memory");
         site.amplifiers[0].cold.as_mut().unwrap().standby = Standby::After("reservoir".into());
         assert!(unloaded(&site).is_wrong(), "500 V of working voltage in standby");
