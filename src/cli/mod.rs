@@ -5,8 +5,10 @@
 
 mod alarm;
 mod check;
+mod curve;
 mod demo;
 mod export;
+mod fit;
 mod import;
 mod listen;
 mod now;
@@ -51,6 +53,10 @@ enum Command {
     Listen(listen::Listen),
     /// Says where mains and rails stand, the headroom, and how old the figures are.
     Now(now::Now),
+    /// Mains to rails for each loading, solved from the supply's circuit.
+    Curve(curve::Curve),
+    /// Fits the supply's model to recorded pairs of mains and rail.
+    Fit(fit::FitCommand),
     /// Lists alarms, or acknowledges one.
     Alarm(alarm::Alarm),
     /// Gives readings, intervals or the alarms' journal out, or a consistent copy of the record.
@@ -83,6 +89,8 @@ pub fn main() -> ExitCode {
         Command::Ports(ports) => ports.run(),
         Command::Listen(listen) => listen.run(config),
         Command::Now(now) => now.run(config),
+        Command::Curve(curve) => curve.run(config),
+        Command::Fit(fit) => fit.run(config),
         Command::Alarm(alarm) => alarm.run(config),
         Command::Export(export) => export.run(config),
         Command::Import(import) => import.run(config),
