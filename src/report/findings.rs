@@ -70,6 +70,10 @@ pub fn finding_sentence(finding: &Finding) -> String {
                  {most_v:.0} V{doubt}."
             )
         }
+        Finding::Limit { node, loading, rail_v, u_v, most_v } => format!(
+            "At {} \"{node}\" stands at {rail_v:.0} V ± {u_v:.0} V; its limit is {most_v:.0} V.",
+            loading.word()
+        ),
         Finding::Idle { node, rail_v, most_v } => format!(
             "At idle the capacitor at \"{node}\" meets {rail_v:.0} V, ripple included; its working voltage is \
              {most_v:.0} V."

@@ -120,6 +120,20 @@ pub enum Finding {
         /// Whether that is its surge voltage (a brief warm-up) and not its working voltage.
         surge: bool,
     },
+    /// A limit that is passed at the declared voltage already. A design-centre figure is compared with the rail there
+    /// and nowhere else: it allows for what mains does about it.
+    Limit {
+        /// The node.
+        node: String,
+        /// Loading at which the limit holds.
+        loading: Loading,
+        /// The rail, V.
+        rail_v: f64,
+        /// Its expanded uncertainty (k = 2), V.
+        u_v: f64,
+        /// The limit, V.
+        most_v: f64,
+    },
     /// A capacitor's working voltage against the idle rail at the declared voltage.
     Idle {
         /// Its node.
@@ -182,9 +196,9 @@ impl Finding {
             Finding::RectifierPeak { peak_a, most_a, .. } => peak_a > most_a,
             Finding::RectifierInverse { inverse_v, most_v, .. } => inverse_v > most_v,
             Finding::ChokeInput { bleeder_a, critical_a, .. } => bleeder_a < critical_a,
-            Finding::Unloaded { rail_v, most_v, .. } | Finding::Idle { rail_v, most_v, .. } => {
-                rail_v > most_v
-            }
+            Finding::Unloaded { rail_v, most_v, .. }
+            | Finding::Idle { rail_v, most_v, .. }
+            | Finding::Limit { rail_v, most_v, .. } => rail_v > most_v,
             Finding::Dissipation { heat_w, most_w, .. } => heat_w > most_w,
             Finding::Heater { heater_v, nominal_v, tolerance_pct } => {
                 (heater_v / nominal_v - 1.0).abs() > tolerance_pct / 100.0

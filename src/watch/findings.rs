@@ -2,6 +2,7 @@
 
 use super::parts::PartWatch;
 use crate::config::{Amplifier, Standby, rectifier};
+use crate::quantity::Uncertain;
 use crate::supply::{
     Circuit, Device, Finding, Loading, Projector, RectifierSheet, SolveOptions, SteadyState, circuit_findings,
     rectifier_findings, soft_source, steady_state,
@@ -48,6 +49,12 @@ pub fn findings(
         surge: capacitor.surge,
     }));
     findings.extend(parts.dissipation_at(declared_v));
+    findings.extend(amplifier.limits.iter().filter_map(|limit| {
+        let rail = projector?.project(&limit.node, limit.loading, Uncertain::new(declared_v, 0.0))?;
+        let (node, loading) = (limit.node.clone(), limit.loading);
+        let over = Finding::Limit { node, loading, rail_v: rail.volts, u_v: rail.u, most_v: limit.max_v };
+        over.is_wrong().then_some(over)
+    }));
     findings
 }
 
