@@ -122,7 +122,32 @@ fn circuit() -> railtide::supply::Circuit {
 fn check_says_back_the_whole_supply_and_what_is_wrong_with_it() {
     let bench = desk(FULL);
     let said = bench.say(&["check"]).replace(&bench.folder.path().display().to_string(), "FOLDER");
-    assert_snapshot!(said, @r#""#);
+    assert_snapshot!(said, @r#"
+    The site "desk" keeps the time of Europe/Lisbon; its mains is declared 230 V at 50 Hz.
+    The record is FOLDER/desk.db; readings are written to it every 10 s, alarms at once.
+    No logger: `run` has nothing to read; the commands that need none work.
+    The amplifier "hall":
+      Transformer wound for 220 V at 50 Hz: 350.0 V ± 7.0 V open-circuit, 60.0 Ω ± 6.0 Ω in one path.
+      The mains wave has a crest factor of 1.386.
+      Rectifier: bridge, silicon, 0.85 V and 0.05 Ω each.
+      Filter: "reservoir" (100 µF, 500 V), then 1000 Ω to "screens" (47 µF, 500 V).
+      It draws 160 mA at idle, 300 mA at full output from "reservoir" at 450 V (by the power 1.5 of the rail); what 220 kΩ take from "screens".
+      At 230 V of mains its rails stand, by the circuit, solved, at
+        unloaded: reservoir 503 V ± 13 V, screens 500 V ± 13 V
+        idle: reservoir 458 V ± 11 V, screens 456 V ± 11 V
+        full: reservoir 436 V ± 12 V, screens 434 V ± 12 V
+      "reservoir" must stay under 500 V (anode supply limit): projected at idle, it is reached at 251.8 V of mains; the alarm's setpoint is 488 V (less its uncertainty), reached at 245.4 V of mains.
+      Findings at 230 V of mains:
+               100 µF at "reservoir": 1 min 9 s from 503 V (13 J) to 60 V through what is there; measure, do not trust time.
+               47 µF at "screens": 1 min 9 s from 500 V (6 J) to 60 V through what is there; measure, do not trust time.
+               The 220 kΩ from "screens" to 0 V bear 500 V and 1.14 W without load: rate them for more than that voltage, and for twice that heat.
+               The heaters get 6.59 V; 6.3 V ± 10 % is 5.67 to 6.93 V.
+               The core is driven at 1.045 times what it was wound for.
+               With cold valves the capacitor at "reservoir" meets 503 V ± 13 V; its surge voltage (the warm-up is brief) is 550 V.
+               With cold valves the capacitor at "screens" meets 500 V ± 13 V; its surge voltage (the warm-up is brief) is 550 V.
+               Each KT66 turns 18.8 W into heat at idle; its sheet allows 25 W.
+    No receiver: alarms are seen only by whoever asks (`railtide alarm`).
+    "#);
 }
 
 #[test]
@@ -132,7 +157,41 @@ fn one_point_of_the_curve_as_json_has_the_keys_that_other_programs_rely_on() {
         &bench,
         &["curve", "hall", "--from", "230", "--to", "230", "--loading", "idle", "--format", "json"],
     );
-    assert_snapshot!(serde_json::to_string_pretty(&rounded(&point)).unwrap(), @r#""#);
+    assert_snapshot!(serde_json::to_string_pretty(&rounded(&point)).unwrap(), @r#"
+    {
+      "amplifier": "hall",
+      "frequency_hz": 50.0,
+      "points": [
+        {
+          "diode_mean_a": 0.0831761,
+          "diode_peak_a": 0.782087,
+          "diode_rms_a": 0.229269,
+          "dropper": null,
+          "heater_v": 6.58636,
+          "inverse_peak_v": 464.708,
+          "loading": "idle",
+          "mains_v": 230.0,
+          "nodes": [
+            {
+              "mean_v": 457.982,
+              "node": "reservoir",
+              "ripple_vpp": 11.6869,
+              "u_v": 11.1931
+            },
+            {
+              "mean_v": 455.91,
+              "node": "screens",
+              "ripple_vpp": 0.336893,
+              "u_v": 11.1608
+            }
+          ],
+          "winding_loss_w": 6.30773,
+          "winding_peak_a": 0.782087,
+          "winding_rms_a": 0.324236
+        }
+      ]
+    }
+    "#);
     let exact = steady_state(&circuit(), 230.0, Loading::Idle, &SolveOptions::default()).unwrap();
     let mean_v = point["points"][0]["nodes"][0]["mean_v"].as_f64().unwrap();
     assert!((mean_v - exact.nodes[0].mean_v).abs() < 1e-6);
@@ -142,8 +201,10 @@ fn one_point_of_the_curve_as_json_has_the_keys_that_other_programs_rely_on() {
 fn a_curve_holds_every_loading_and_mains_in_order_and_its_csv_and_chart_the_same_figures() {
     let bench = desk(FULL);
     let range = ["--from", "220", "--to", "240", "--step", "10"];
-    let curve = |more: &[&str]| [&["curve", "hall"][..], &range, more].concat();
-    let report = json(&bench, &curve(&["--format", "json"]));
+    fn curve<'a>(range: &[&'a str], more: &[&'a str]) -> Vec<&'a str> {
+        [&["curve", "hall"][..], range, more].concat()
+    }
+    let report = json(&bench, &curve(&range, &["--format", "json"]));
     let points: Vec<(f64, &str)> = report["points"]
         .as_array()
         .unwrap()
@@ -156,34 +217,36 @@ fn a_curve_holds_every_loading_and_mains_in_order_and_its_csv_and_chart_the_same
         .collect();
     assert_eq!(points, expected);
 
-    let csv = bench.say(&curve(&["--format", "csv"]));
+    let csv = bench.say(&curve(&range, &["--format", "csv"]));
     let rows: Vec<&str> = csv.split("\r\n").filter(|row| !row.is_empty()).collect();
     assert_eq!(rows.len(), 1 + 9 * 2, "a row a node, and their names");
     assert!(rows[0].starts_with("mains_v,loading,node,mean_v,ripple_vpp,u_v,"));
     let mean_v = report["points"][3]["nodes"][0]["mean_v"].as_f64().unwrap();
-    assert!(rows[7].starts_with(&format!("220,idle,reservoir,{mean_v},")), "{}", rows[7]);
+    let cells: Vec<&str> = rows[7].split(',').collect();
+    assert_eq!(cells[..3], ["220", "idle", "reservoir"]);
+    assert!((cells[3].parse::<f64>().unwrap() - mean_v).abs() < 1e-9, "{}", rows[7]);
 
-    let svg = bench.say(&curve(&["--format", "svg"]));
+    let svg = bench.say(&curve(&range, &["--format", "svg"]));
     assert_eq!(svg.matches("stroke-dasharray").count(), 3, "a line a loading");
     for word in ["unloaded", "idle", "full", "mains, V r.m.s.", "rail, V"] {
         assert!(svg.contains(word), "{word}");
     }
-    let text = bench.say(&curve(&[]));
+    let text = bench.say(&curve(&range, &[]));
     assert!(text.contains("Idle\n") && text.contains("240 V"), "{text}");
 }
 
 #[test]
 fn what_makes_no_curve_is_refused_with_what_to_do() {
     let bench = desk(FULL);
-    assert_snapshot!(refusal(&bench, &["curve", "hal"]), @r#""#);
-    assert_snapshot!(refusal(&bench, &["curve", "hall", "--from", "240", "--to", "220"]), @r#""#);
-    assert_snapshot!(refusal(&bench, &["curve", "hall", "--step", "0"]), @r#""#);
-    assert_snapshot!(refusal(&bench, &["curve", "hall", "--format", "svg", "--node", "drivers"]), @r#""#);
+    assert_snapshot!(refusal(&bench, &["curve", "hal"]), @r#"railtide: the config has no amplifier hal; there are hall"#);
+    assert_snapshot!(refusal(&bench, &["curve", "hall", "--from", "240", "--to", "220"]), @r#"railtide: --to 220 is less than --from 240; give the lower mains first"#);
+    assert_snapshot!(refusal(&bench, &["curve", "hall", "--step", "0"]), @r#"railtide: --step 0: expected volts above 0"#);
+    assert_snapshot!(refusal(&bench, &["curve", "hall", "--format", "svg", "--node", "drivers"]), @r#"railtide: hall has no node drivers; there are reservoir, screens"#);
     assert!(refusal(&bench, &["curve", "hall", "--loading", "loud"]).contains("unloaded, idle or full"));
     let unknown = desk(&FULL.replace("full_ma_each = 75\n", ""));
     assert!(refusal(&unknown, &["curve", "hall", "--loading", "full"]).contains("full"));
     let short = Bench::hall("/dev/null".as_ref(), "http://127.0.0.1:1/");
-    assert_snapshot!(refusal(&short, &["curve", "hall"]), @r#""#);
+    assert_snapshot!(refusal(&short, &["curve", "hall"]), @r#"railtide: the config states no circuit of hall, and a measured pair alone gives no curve; state its supply the full way ([amplifier.transformer], [amplifier.rectifier], [[amplifier.filter]])"#);
 }
 
 /// 2026-11-02T00:00:00Z, a Monday.
@@ -258,7 +321,45 @@ fn a_fit_finds_the_truth_is_kept_and_the_curve_follows_it() {
     }
     assert_eq!(made["told_apart"], true);
     made["made_at"] = "HIDDEN".into();
-    assert_snapshot!(serde_json::to_string_pretty(&rounded(&made)).unwrap(), @r#""#);
+    assert_snapshot!(serde_json::to_string_pretty(&rounded(&made)).unwrap(), @r#"
+    {
+      "amplifier": "hall",
+      "from": "2026-11-02T00:00:00+00:00",
+      "idle": null,
+      "independent_pairs": 401.0,
+      "kept": true,
+      "made_at": "HIDDEN",
+      "mains_max_v": 237.459,
+      "mains_min_v": 228.653,
+      "node": "reservoir",
+      "not_before": null,
+      "pairs": {
+        "all": 1440,
+        "idle": 345,
+        "loaded": 0,
+        "off": 1020,
+        "outliers": 0,
+        "unloaded": 56,
+        "warming_up": 19
+      },
+      "residual_v": 0.31401,
+      "secondary": {
+        "fitted_u_v": 1.32109,
+        "fitted_v": 355.106,
+        "nameplate_u_v": 8.0829,
+        "nameplate_v": 350.0
+      },
+      "source": {
+        "fitted_ohm": 51.0307,
+        "fitted_u_ohm": 0.345288,
+        "nameplate_ohm": 60.0,
+        "nameplate_u_ohm": 6.9282
+      },
+      "to": "2026-11-03T00:00:00+00:00",
+      "told_apart": true,
+      "used": true
+    }
+    "#);
 
     let after = json(&bench, &["curve", "hall", "--from", "230", "--to", "230", "--format", "json"]);
     let idle = |report: &Value, key: &str| report["points"][1]["nodes"][0][key].as_f64().unwrap();
@@ -283,18 +384,27 @@ fn a_fit_is_said_in_plain_words_and_without_standby_tells_that_it_cannot_tell() 
     let bench = desk(&format!("{FULL}{LOGGER}"));
     record_a_day(&bench);
     let text = bench.say(&["fit", "hall", "--from", "2026-11-02 18:20", "--to", "2026-11-02 23:00", "--loading", "idle"]);
-    assert_snapshot!(text, @r#""#);
+    assert_snapshot!(text, @r#"
+    The supply of the hall, fitted to 280 pairs of mains and "reservoir" from Mon 2 Nov 18:20:00 to Mon 2 Nov 23:00:00.
+      seen       unloaded 0, idle 280, loaded 0, warming up or switching 0, off 0; 0 outliers
+      mains      230.3 to 237.3 V
+      secondary  358.6 V ± 3.0 V  (config: 350.0 V ± 8.1 V)
+      source     60.0 Ω ± 6.9 Ω  (config: 60.0 Ω ± 6.9 Ω)
+      residuals  0.31 V (one pair, robust); worth 280 independent pairs
+    The record cannot tell secondary and source resistance apart: the config's source resistance stands, and the secondary alone was fitted. A record with both standby and idle would tell them.
+    It is kept, and the rails are projected by it from now on (by a running daemon from its next start).
+    "#);
 }
 
 #[test]
 fn what_cannot_be_fitted_is_refused_with_what_to_do() {
     let bench = desk(FULL);
-    assert_snapshot!(refusal(&bench, &["fit", "hall"]), @r#""#);
+    assert_snapshot!(refusal(&bench, &["fit", "hall"]), @r#"railtide: the config has no mains channel, and a fit needs recorded pairs of mains and rail; add one"#);
     let with_logger = desk(&format!("{FULL}{LOGGER}"));
     assert!(refusal(&with_logger, &["fit", "hall"]).contains("there is no database"));
     record_a_day(&with_logger);
     let off = refusal(&with_logger, &["fit", "hall", "--to", "2026-11-02 16:00"]);
-    assert_snapshot!(off, @r#""#);
+    assert_snapshot!(off, @r#"railtide: a fit needs at least 20 pairs with the amplifier unloaded or idle, and the record has 0 of 960 (960 with it off, 0 warming up or switching, 0 loaded): record more, or say what it did with --loading"#);
 }
 
 #[test]
@@ -302,7 +412,10 @@ fn two_limits_on_one_node_at_one_loading_are_one_alarm_and_a_mistake() {
     let twice = "[[amplifier.limit]]\nnode = \"reservoir\"\nmax_v = 480\n";
     let bench = desk(&format!("{FULL}{twice}"));
     let said = refusal(&bench, &["check"]);
-    assert_snapshot!(said.replace(&bench.folder.path().display().to_string(), "FOLDER"), @r#""#);
+    assert_snapshot!(said.replace(&bench.folder.path().display().to_string(), "FOLDER"), @r#"
+    railtide: the config has mistakes, and nothing was done:
+    FOLDER/railtide.toml:45: node = "reservoir": the limit of line 41 is on the same node at loading idle; expected another node or loading, or only the stricter of the two
+    "#);
     let other = desk(&format!("{FULL}{twice}loading = \"unloaded\"\n"));
     assert!(other.say(&["check"]).contains("480 V"));
 }
