@@ -328,3 +328,29 @@ start,channel,rms_v,min_v,max_v,readings,covered_pct,flagged
         .unwrap();
     assert_eq!(nothing, "time,channel,value_v,quality\r\n", "no rows is an answer too");
 }
+
+#[test]
+fn a_damaged_record_says_what_cannot_be_read_and_gives_out_the_rest() {
+    let bench = desk();
+    import_house(&bench);
+    let plain = rusqlite::Connection::open(bench.database()).unwrap();
+    plain.execute("UPDATE block SET millivolts = x'00' WHERE key = (SELECT min(key) + 24 * 3600000 * 256 FROM block)", []).unwrap();
+    assert_eq!(plain.changes(), 1);
+    drop(plain);
+    let output = bench.run(&["export"]);
+    assert!(output.status.success());
+    let said = String::from_utf8_lossy(&output.stderr).into_owned();
+    insta::assert_snapshot!(said.replace(&bench.folder.path().display().to_string(), "FOLDER"), @r#"passed over: FOLDER/hall.db is damaged (the readings of channel 1 in the hour from 2006-12-17T17:00:00Z: pco InsufficientData error: [BitReader] out of bounds at bit 32 / 8): keep it as it is, set `[store] path` to a new file to go on recording, and save what can be read with `railtide export`"#);
+    let rows = String::from_utf8_lossy(&output.stdout).lines().count();
+    assert_eq!(rows, 48_419 - 60 + 1);
+
+    // Where not even the first page can be read there is nothing to save, and the daemon makes no new file by itself.
+    let mut bytes = std::fs::read(bench.database()).unwrap();
+    bytes[..4096].fill(0x5a);
+    std::fs::write(bench.database(), bytes).unwrap();
+    let refused = bench.run(&["export"]);
+    assert!(!refused.status.success());
+    let said = String::from_utf8_lossy(&refused.stderr).into_owned();
+    assert!(said.contains("hall.db"), "{said}");
+    insta::assert_snapshot!(said.replace(&bench.folder.path().display().to_string(), "FOLDER"), @r#"railtide: FOLDER/hall.db is not a railtide database, or its first page is damaged: set `[store] path` to another file, or put a backup in its place"#);
+}

@@ -206,7 +206,11 @@ fn every_circuit_agrees_with_the_reference() {
         };
         let mut check = |what: String, got: f64, want: f64, within: f64| {
             if (got - want).abs() > within * want.abs() {
-                wrong.push(format!("{}: {what} {got} and not {want} ({:+.3} %)", case.name, 100.0 * (got / want - 1.0)));
+                wrong.push(format!(
+                    "{}: {what} {got} and not {want} ({:+.3} %)",
+                    case.name,
+                    100.0 * (got / want - 1.0)
+                ));
             }
         };
         assert_eq!(got.nodes.len(), want.nodes.len());

@@ -21,9 +21,15 @@ struct Stretch {
 }
 
 fn stretch() -> impl Strategy<Value = Stretch> {
-    (any::<bool>(), 0.002..0.08, 1.0..20.0, 4e-6..300e-6, prop_oneof![Just(0.0), 0.0..3.0], 0.0..0.5f64).prop_map(
-        |(choke, drop, henry, farad, esr_ohm, share)| Stretch { choke, drop, henry, farad, esr_ohm, share },
-    )
+    (any::<bool>(), 0.002..0.08, 1.0..20.0, 4e-6..300e-6, prop_oneof![Just(0.0), 0.0..3.0], 0.0..0.5f64)
+        .prop_map(|(choke, drop, henry, farad, esr_ohm, share)| Stretch {
+            choke,
+            drop,
+            henry,
+            farad,
+            esr_ohm,
+            share,
+        })
 }
 
 fn device() -> impl Strategy<Value = Device> {
@@ -78,7 +84,8 @@ fn supply() -> impl Strategy<Value = Circuit> {
                 1 => SeriesPart::Resistor(0.3 * drop * load_ohm),
                 _ => SeriesPart::None,
             };
-            let part = |farad, esr_ohm| Capacitor { farad, rated_v: None, esr_ohm, in_series: 1, balance_ohm: None };
+            let part =
+                |farad, esr_ohm| Capacitor { farad, rated_v: None, esr_ohm, in_series: 1, balance_ohm: None };
             let first = (!doubler).then(|| part(farad, esr_ohm));
             let mut filter = vec![Section { node: "n0".to_owned(), series, capacitor: first }];
             let mut loads = vec![
@@ -99,7 +106,12 @@ fn supply() -> impl Strategy<Value = Circuit> {
             }
             let zener_v = dropped * rail_v;
             let dropper = match dropper {
-                0 => Some(Dropper::ReturnMosfet { zener_v, threshold_v: 3.0, k_a_per_v2: 1.0, half_width_v: 2.0 }),
+                0 => Some(Dropper::ReturnMosfet {
+                    zener_v,
+                    threshold_v: 3.0,
+                    k_a_per_v2: 1.0,
+                    half_width_v: 2.0,
+                }),
                 1 => Some(Dropper::ReturnZener { zener_v, zener_ohm: 0.1 * dropped * load_ohm }),
                 2 => Some(Dropper::ReturnResistor(0.3 * dropped * load_ohm)),
                 3 if filter.len() > 1 => Some(Dropper::LineResistor(dropped * load_ohm)),

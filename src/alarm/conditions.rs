@@ -3,7 +3,7 @@
 
 use std::time::Duration;
 
-use super::{Facts, Figures, PartFigures, Priority, RailFigures, Side};
+use super::{AheadFigures, Facts, Figures, PartFigures, Priority, RailFigures, Side};
 use crate::supply::Loading;
 
 /// One row: what is watched for, and how.
@@ -153,6 +153,22 @@ pub const CONDITIONS: &[Condition] = &[
         judge: |figures| parts(&figures.apart, "V", ""),
     },
     Condition {
+        name: "rail-ahead",
+        meaning: "by the tide table a rail may pass its setpoint within the next six hours: the upper edge of its 90 % \
+                  band does",
+        priority: Priority::Low,
+        side: Side::Over,
+        deadband: 2.0,
+        unit: "V",
+        on_delay: seconds(0),
+        off_delay: seconds(1_800),
+        advice: "Switch off before then, and leave it off until the mains has come down. A tap is changed only \
+                 unplugged, discharged and by someone qualified, and never for one evening, since it starves the \
+                 amplifier at low mains.",
+        set_in: "[[amplifier.limit]] max_v, [site] guard_band",
+        judge: |figures| figures.ahead.iter().map(judge_ahead).collect(),
+    },
+    Condition {
         name: "logger-silent",
         meaning: "no good line has come from a logger for too long: nothing is being watched",
         priority: Priority::Medium,
@@ -165,6 +181,20 @@ pub const CONDITIONS: &[Condition] = &[
                  rails: take them as high.",
         set_in: "[[channel]] sample_period_ms (ten periods, at least 15 s)",
         judge: logger_silent,
+    },
+    Condition {
+        name: "store-full",
+        meaning: "the disk of the record will be full within a week at the record's own growth",
+        priority: Priority::Medium,
+        side: Side::Under,
+        deadband: 1.0,
+        unit: "days",
+        on_delay: seconds(600),
+        off_delay: seconds(600),
+        advice: "Free some space on the record's disk, give [store] path a larger one, or let old readings go with \
+                 [store] keep_readings. When it is full alarms still go out, but readings are lost.",
+        set_in: "[store] keep_readings",
+        judge: store_full,
     },
 ];
 
@@ -205,6 +235,28 @@ fn judge_rail(rail: &RailFigures, mains_v: Option<f64>) -> Option<Judged> {
             note: String::new(),
         },
     })
+}
+
+/// An amplifier that is off now may be meant for tonight, so nothing suppresses this.
+fn judge_ahead(ahead: &AheadFigures) -> Judged {
+    Judged {
+        subject: ahead.subject.clone(),
+        value: ahead.rail.map(|rail| rail.volts),
+        setpoint: ahead.setpoint_v,
+        suppressed: false,
+        facts: Facts {
+            value: ahead.rail.map(|rail| rail.volts),
+            value_u: ahead.rail.map(|rail| rail.u),
+            setpoint: Some(ahead.setpoint_v),
+            limit: Some(ahead.limit_v),
+            unit: "V".to_owned(),
+            mains_v: ahead.mains_v,
+            source: "forecast".to_owned(),
+            loading: ahead.loading.word().to_owned(),
+            proved_on: None,
+            note: ahead.note.clone(),
+        },
+    }
 }
 
 /// Judges the figures of parts as they stand.
@@ -255,6 +307,27 @@ fn logger_silent(figures: &Figures) -> Vec<Judged> {
         .collect()
 }
 
+/// A week: time enough to find another card.
+const FULL_WITHIN_DAYS: f64 = 7.0;
+
+fn store_full(figures: &Figures) -> Vec<Judged> {
+    let Some(room) = figures.room else { return Vec::new() };
+    let days = room.days_left();
+    vec![Judged {
+        subject: String::new(),
+        value: Some(days),
+        setpoint: FULL_WITHIN_DAYS,
+        suppressed: false,
+        facts: Facts {
+            value: Some(days),
+            setpoint: Some(FULL_WITHIN_DAYS),
+            unit: "days".to_owned(),
+            note: format!("{:.0} MB are free", room.free_bytes as f64 / 1e6),
+            ..Facts::default()
+        },
+    }]
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
@@ -294,6 +367,21 @@ mod tests {
         assert_eq!(rail_high(&rail(None, None))[0].value, None);
         assert!(rail_high(&rail(Some(490.0), Some(0.3)))[0].suppressed);
         assert!(!rail_high(&rail(Some(490.0), None))[0].suppressed);
+    }
+
+    #[test]
+    fn the_disk_is_told_days_before_it_is_full_by_the_records_own_growth() {
+        let days = |free_bytes, bytes_per_day| {
+            let room = super::super::RoomFigures { free_bytes, bytes_per_day };
+            store_full(&Figures { room: Some(room), ..Figures::default() })[0].value.unwrap()
+        };
+        // Two channels at a reading a second: about 0.35 MB a day.
+        assert!((days(320_000_000, Some(350_000.0)) - 857.0).abs() < 1.0);
+        assert!(days(21_000_000, Some(350_000.0)) < FULL_WITHIN_DAYS);
+        assert_eq!(days(5_000_000, Some(350_000.0)), 0.0);
+        assert!(days(1_000_000_000, None) > FULL_WITHIN_DAYS, "a young record on a roomy disk alarms nobody");
+        assert!(days(100_000_000, None) < FULL_WITHIN_DAYS);
+        assert!(store_full(&Figures::default()).is_empty(), "nobody has looked yet");
     }
 
     #[test]

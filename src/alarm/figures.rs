@@ -24,8 +24,12 @@ pub struct Figures {
     pub dissipations: Vec<PartFigures>,
     /// Each capacitor that meets the unloaded rail: that rail if the amplifier were switched on cold now, V.
     pub unloaded: Vec<PartFigures>,
+    /// The room left for the record; `None` while nobody has looked.
+    pub room: Option<RoomFigures>,
     /// Each measured rail that can be projected: how far it lies outside the band from full to idle, V.
     pub apart: Vec<PartFigures>,
+    /// Each limit on a rail that can be projected: what the tide table says of the next hours.
+    pub ahead: Vec<AheadFigures>,
 }
 
 /// A figure of a supply's parts that follows mains, against its own limit.
@@ -44,6 +48,46 @@ pub struct PartFigures {
     /// Whether it has no meaning now: the amplifier is proved to be off.
     pub suppressed: bool,
     /// What else there is to say.
+    pub note: String,
+}
+
+/// The room left on the record's disk.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct RoomFigures {
+    /// Bytes that the disk has free for us.
+    pub free_bytes: u64,
+    /// Bytes that the record grows by in a day; `None` while it is too young to tell.
+    pub bytes_per_day: Option<f64>,
+}
+
+impl RoomFigures {
+    /// So little is no room, bytes: a commit, the log and a day's growth of any site must fit.
+    const NONE_LEFT: u64 = 20_000_000;
+
+    /// Days until the disk is full at the record's own growth. A record that is too young to tell is taken to grow by
+    /// [`RoomFigures::NONE_LEFT`] a day, which two hundred channels at a reading a second would.
+    pub fn days_left(&self) -> f64 {
+        let free = self.free_bytes.saturating_sub(Self::NONE_LEFT) as f64;
+        free / self.bytes_per_day.unwrap_or(Self::NONE_LEFT as f64).max(1.0)
+    }
+}
+
+/// How high one rail may come within the next hours, against its setpoint.
+#[derive(Clone, Debug, PartialEq, serde::Serialize)]
+pub struct AheadFigures {
+    /// The rail, as [`RailFigures::subject`] names it.
+    pub subject: String,
+    /// The loading that the limit is judged at.
+    pub loading: Loading,
+    /// The rail at the highest mains that the tide table's band reaches; `None` without a table, or with an old one.
+    pub rail: Option<Uncertain>,
+    /// That mains, V.
+    pub mains_v: Option<f64>,
+    /// The limit less the projection's guard band, V.
+    pub setpoint_v: f64,
+    /// The limit, V.
+    pub limit_v: f64,
+    /// From when on it's expected, if it is.
     pub note: String,
 }
 

@@ -11,7 +11,7 @@ mod state;
 
 pub use conditions::{CONDITIONS, Condition, Judged, condition};
 pub use delay::{Delay, Level, Side};
-pub use figures::{Figures, LoggerFigures, PartFigures, RailFigures};
+pub use figures::{AheadFigures, Figures, LoggerFigures, PartFigures, RailFigures, RoomFigures};
 pub use record::{
     AlarmKey, AlarmRecord, Delivery, Facts, JournalEntry, Notice, NoticeKind, Outcome, Priority, Request,
     RequestAction,

@@ -18,7 +18,7 @@ use crate::quantity::Utc;
 use crate::reading::Reading;
 use crate::report::LocalTime;
 use crate::report::export::{CsvRows, JsonLines, Kind, Row, Rows, XLSX_ROWS, XlsxRows};
-use crate::store::{JournalFilter, Readings, Store, StoredChannel};
+use crate::store::{JournalFilter, Readings, Store, StoreError, StoredChannel};
 
 /// Arguments of `export`.
 #[derive(Debug, Args)]
@@ -242,9 +242,10 @@ impl Job<'_> {
         let bar = bar(|| self.count(Kind::Readings))?;
         let mut lanes: Vec<Lane<'_>> = Vec::new();
         for channel in &self.channels {
-            let mut readings = self.store.readings(channel.id, from, to);
-            let head = readings.next().transpose()?;
-            lanes.push(Lane { channel: &channel.name, readings, head, rows: 0 });
+            let readings = self.store.readings(channel.id, from, to);
+            let mut lane = Lane { channel: &channel.name, readings, head: None, rows: 0 };
+            lane.advance()?;
+            lanes.push(lane);
         }
         let mut done = 0_u64;
         // A handful of channels: looking at each head is quicker than keeping a heap.
@@ -254,7 +255,7 @@ impl Job<'_> {
             let Some(reading) = lane.head else { break };
             rows.row(Row::Reading(lane.channel, reading))?;
             lane.rows += 1;
-            lane.head = lane.readings.next().transpose()?;
+            lane.advance()?;
             done += 1;
             if done.is_multiple_of(65_536) {
                 bar.set_position(done);
@@ -303,6 +304,21 @@ struct Lane<'s> {
     readings: Readings<'s>,
     head: Option<Reading>,
     rows: u64,
+}
+
+impl Lane<'_> {
+    /// Takes the next reading; a damaged hour is said and passed over, so that what can be read is saved.
+    fn advance(&mut self) -> anyhow::Result<()> {
+        self.head = loop {
+            match self.readings.next() {
+                Some(Err(damaged @ StoreError::Damaged { .. })) => {
+                    super::remark(&format!("passed over: {damaged}"))?;
+                }
+                other => break other.transpose()?,
+            }
+        };
+        Ok(())
+    }
 }
 
 /// The channels that are meant: those named, or all that the record has known.

@@ -7,6 +7,7 @@ mod alone;
 mod early;
 mod held;
 mod hush;
+mod outlook;
 mod upkeep;
 mod walk;
 

@@ -14,6 +14,7 @@ use crate::watch::{Decided, Watch};
 use super::early::Early;
 use super::held::Held;
 use super::hush::Hush;
+use super::outlook::Outlook;
 use super::upkeep::Upkeep;
 
 /// After a commit that failed the next one is tried no sooner than this.
@@ -35,6 +36,7 @@ pub(super) struct Walk {
     /// True until requests that were put before the start have been looked for.
     requests_unread: bool,
     upkeep: Upkeep,
+    outlook: Outlook,
     hush: Hush,
 }
 
@@ -64,6 +66,7 @@ impl Walk {
             store_failed: false,
             requests_unread: true,
             upkeep: Upkeep::new(start, site.store.keep_readings),
+            outlook: Outlook::new(site),
             hush: Hush::default(),
         }
     }
@@ -112,8 +115,33 @@ impl Walk {
         {
             self.log_store_failure(&error, now.mono);
         }
+        match self.upkeep.room(&self.store, now) {
+            Ok(Some(room)) => self.watch.set_room(room),
+            Ok(None) => {}
+            Err(error) => self.log_store_failure(&error, now.mono),
+        }
+        self.look_ahead(now);
         for (what, times) in self.hush.overdue(now.mono) {
             tracing::warn!("{what} ({times} times more)");
+        }
+    }
+
+    /// At each interval's end: the tide table, from the record, for the watch to judge.
+    fn look_ahead(&mut self, now: Moment) {
+        match self.outlook.turn(&self.store, now) {
+            None => {}
+            Some(Ok(table)) => {
+                if let Err(why) = &table {
+                    tracing::debug!("no tide table: {why}");
+                }
+                self.watch.forecast(table.ok().as_ref(), now.mono);
+            }
+            Some(Err(error))
+                if self.hush.note("the record can't be read for the tide table", now.mono).is_some() =>
+            {
+                tracing::warn!("there is no tide table this time: {error}");
+            }
+            Some(Err(_)) => {}
         }
     }
 
@@ -330,7 +358,13 @@ webhook = "http://127.0.0.1:9/"
             let mut store = Store::open(&site.store.path, &OpenOptions::default()).unwrap();
             let ids = store.register_channels(&crate::daemon::channel_specs(&site)).unwrap();
             let (remembered, restored) = crate::daemon::remembered(&store).unwrap();
-            let watch = Watch::new(&site, &ids, &crate::daemon::projectors(&site, &store).unwrap(), remembered, clock.now());
+            let watch = Watch::new(
+                &site,
+                &ids,
+                &crate::daemon::projectors(&site, &store).unwrap(),
+                remembered,
+                clock.now(),
+            );
             let time = TimeBase::new(clock.now(), restored.newest);
             let (early, placed) = Early::begin(&clock, &time, &restored);
             store.commit(&crate::store::Batch { placed, ..Default::default() }).unwrap();

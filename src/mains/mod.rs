@@ -7,16 +7,20 @@
 
 mod civil;
 mod events;
+mod histogram;
 mod interval;
 mod percentile;
 mod profile;
 mod rules;
+mod tide;
 mod verdict;
 
 pub use civil::{CivilDay, DayKind, civil_days, start_of};
 pub use events::{Event, EventKind, EventLimits, Sample, Spell, events, excursions};
+pub use histogram::Histogram;
 pub use interval::{Aggregator, INTERVAL, Interval, WHOLE_FROM, intervals, intervals_of};
 pub use percentile::Distribution;
 pub use profile::{DayAbove, DayProfile, Slot, above_by_day, by_time_of_day, day_profile, highest};
 pub use rules::{Bound, Clause, Flagged, Period, RuleError, Statistic, Status, SupplyRule, parse_rules};
+pub use tide::{FEWEST_ROWS, HISTORY, NoForecast, TideStep, TideTable, Turn, TurnKind, forecast, turns};
 pub use verdict::{ClauseVerdict, Verdict};

@@ -126,6 +126,9 @@ fn standing(facts: &Facts, tense: Tense) -> Option<String> {
     let verb = match (facts.unit.as_str(), facts.source.as_str(), tense) {
         ("s", _, Tense::Now) => "has lasted",
         ("s", _, Tense::Past) => "lasted",
+        ("days", _, _) => "has room left for",
+        (_, "forecast", Tense::Now) => "may come to",
+        (_, "forecast", Tense::Past) => "was expected to come to at most",
         (_, "projected", _) if facts.proved_on == Some(true) => "is taken to stand at",
         (_, "projected", _) => "would stand at",
         _ => "stands at",
@@ -141,6 +144,10 @@ fn figures(facts: &Facts, tense: Tense) -> Option<String> {
     match (facts.source.as_str(), mains) {
         ("projected", Some(mains_v)) => {
             let _ = write!(sentence, ", projected from mains at {mains_v:.1} V");
+        }
+        ("forecast", Some(mains_v)) => {
+            let _ =
+                write!(sentence, ", with mains at the upper edge of the tide table's band, {mains_v:.1} V,");
         }
         ("projected", None) => sentence.push_str(", projected from mains"),
         (source, mains) => {

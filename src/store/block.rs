@@ -30,7 +30,7 @@ pub(super) struct Block {
 
 /// A block's bytes don't give the readings that they should; becomes [`super::StoreError::Damaged`].
 #[derive(Debug, thiserror::Error)]
-#[error("the readings of channel {} in the hour from {} ms UTC: {what}", channel.0, hour.0)]
+#[error("the readings of channel {} in the hour from {}: {what}", channel.0, iso(*hour))]
 struct BadBlock {
     channel: ChannelId,
     hour: Utc,
@@ -59,6 +59,11 @@ impl Summary {
             mean_square_v2: (n > 0).then(|| squares / n as f64 / 1e6),
         }
     }
+}
+
+fn iso(at: Utc) -> String {
+    let time = chrono::DateTime::from_timestamp_millis(at.0).unwrap_or_default();
+    time.to_rfc3339_opts(chrono::SecondsFormat::Secs, true)
 }
 
 impl Block {

@@ -76,7 +76,7 @@ pub enum StoreError {
         known: usize,
     },
     /// A SQLite file of some other program.
-    #[error("{} is not a railtide database: set `[store] path` to another file", path.display())]
+    #[error("{} is not a railtide database, or its first page is damaged: set `[store] path` to another file, or put a backup in its place", path.display())]
     NotOurs {
         /// The file.
         path: PathBuf,

@@ -14,6 +14,7 @@ mod columns;
 mod copy;
 mod error;
 mod fits;
+mod growth;
 mod hours;
 mod intervals;
 mod lock;

@@ -4,8 +4,8 @@ use super::parts::PartWatch;
 use crate::config::{Amplifier, Standby, rectifier};
 use crate::quantity::Uncertain;
 use crate::supply::{
-    Circuit, Device, Finding, Loading, Projector, RectifierSheet, SolveOptions, SteadyState, circuit_findings,
-    rectifier_findings, soft_source, steady_state,
+    Circuit, Device, Finding, Loading, Projector, RectifierSheet, SolveOptions, SteadyState,
+    circuit_findings, rectifier_findings, soft_source, steady_state,
 };
 
 /// The findings of `amplifier`, faults and figures that are good to know alike ([`Finding::is_wrong`] tells them

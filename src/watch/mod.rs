@@ -4,6 +4,7 @@
 //! Pure: the daemon, the demo, a year's replay and a test at a desk all drive the same [`Watch`]. It decides in
 //! memory; whoever drives it commits what it [`Decided`] before telling anybody.
 
+mod ahead;
 mod channel;
 mod faults;
 mod findings;
@@ -12,6 +13,7 @@ mod parts;
 mod projecting;
 mod rail;
 
+pub use ahead::LOOK_AHEAD;
 pub use channel::{fresh_for, is_plausible, uncertain};
 pub use findings::findings;
 pub use parts::{CapacitorWatch, PartWatch};
@@ -21,13 +23,16 @@ pub use rail::{Projection, RailWatch, mains_channel, part_watches, rail_watches}
 use std::time::Duration;
 
 use crate::alarm::{
-    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction, State,
+    AlarmKey, AlarmRecord, Event, Figures, JournalEntry, LoggerFigures, Notice, Request, RequestAction,
+    RoomFigures, State,
 };
 use crate::config::Site;
+use crate::mains::TideTable;
 use crate::quantity::{Moment, Mono};
 use crate::reading::{ChannelId, Reading, Stamp};
 use crate::supply::Projector;
 
+use ahead::Ahead;
 use channel::WatchedChannel;
 use ledger::Ledger;
 
@@ -74,6 +79,9 @@ pub struct Watch {
     channels: Vec<WatchedChannel>,
     rails: Vec<RailWatch>,
     parts: Vec<PartWatch>,
+    room: Option<RoomFigures>,
+    ahead: Ahead,
+    zone: chrono_tz::Tz,
     ledger: Ledger,
 }
 
@@ -118,12 +126,16 @@ impl Watch {
                 watched
             })
             .collect();
+        let rails = rail_watches(site, projectors);
         Watch {
             mains_channel: mains_channel(site),
             loggers,
             channels,
-            rails: rail_watches(site, projectors),
+            ahead: Ahead::new(&rails, None, site.time_zone, now.mono),
+            zone: site.time_zone,
+            rails,
             parts: part_watches(site, projectors),
+            room: None,
             ledger: Ledger::new(site, restored),
         }
     }
@@ -145,6 +157,17 @@ impl Watch {
     /// Learns that a logger's port is not open, and why.
     pub fn disconnected(&mut self, logger: usize, why: String) {
         self.loggers[logger].disconnected = Some(why);
+    }
+
+    /// Learns how much room there is for the record.
+    pub fn set_room(&mut self, room: RoomFigures) {
+        self.room = Some(room);
+    }
+
+    /// Learns what the tide table says, at an interval's end; `None` where there can be none. It's judged from the
+    /// next tick on.
+    pub fn forecast(&mut self, table: Option<&TideTable>, now: Mono) {
+        self.ahead = Ahead::new(&self.rails, table, self.zone, now);
     }
 
     /// Lets time pass: delays run out, figures grow old, silence is noticed.
@@ -184,6 +207,8 @@ impl Watch {
                 })
                 .collect(),
             rails: self.rails.iter().map(|rail| rail.figures(mains, fresh)).collect(),
+            room: self.room,
+            ahead: self.ahead.figures(now).collect(),
             ..Figures::default()
         };
         for part in &self.parts {

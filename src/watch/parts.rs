@@ -4,9 +4,7 @@
 use crate::alarm::PartFigures;
 use crate::config::{Amplifier, ColdStart, OutputStage, Rating, Standby, output_valve};
 use crate::quantity::Uncertain;
-use crate::supply::{
-    CORE_LIMIT, Circuit, Finding, Loading, Projector, RailCurve, core_ratio,
-};
+use crate::supply::{CORE_LIMIT, Circuit, Finding, Loading, Projector, RailCurve, core_ratio};
 
 use super::faults::{Fault, faults, suspect};
 
@@ -97,9 +95,17 @@ impl PartWatch {
             .iter()
             .filter_map(|&(channel, node)| {
                 let idle = curve(node, Loading::Idle)?;
-                let standby = waits_in_standby(amplifier, node).then(|| curve(node, Loading::Unloaded)).flatten();
+                let standby =
+                    waits_in_standby(amplifier, node).then(|| curve(node, Loading::Unloaded)).flatten();
                 let faults = amplifier.circuit.iter().flat_map(|circuit| faults(circuit, node)).collect();
-                Some(Band { channel, node: node.to_owned(), idle, full: curve(node, Loading::Full), standby, faults })
+                Some(Band {
+                    channel,
+                    node: node.to_owned(),
+                    idle,
+                    full: curve(node, Loading::Full),
+                    standby,
+                    faults,
+                })
             })
             .collect();
         let lowest_limit = amplifier.limits.iter().map(|l| l.max_v).fold(f64::INFINITY, f64::min);

@@ -39,11 +39,18 @@ pub fn projecting(amplifier: &Amplifier, fit: Option<&RecordedFit>) -> Projectin
 
 /// The newest of `fits` (newest first) that still holds: made of the circuit as the config states it now, and with no
 /// entry of the service log on one of its days or after it.
-pub fn valid_fit<'f>(amplifier: &Amplifier, fits: &'f [RecordedFit], time_zone: Tz) -> Option<&'f RecordedFit> {
+pub fn valid_fit<'f>(
+    amplifier: &Amplifier,
+    fits: &'f [RecordedFit],
+    time_zone: Tz,
+) -> Option<&'f RecordedFit> {
     let circuit = amplifier.circuit.as_ref()?;
     // An entry names a day, and nobody knows the hour: its whole day counts as change.
     let changed = |from| {
-        amplifier.events.iter().any(|event| event.on.succ_opt().is_none_or(|next| start_of(next, time_zone) > from))
+        amplifier
+            .events
+            .iter()
+            .any(|event| event.on.succ_opt().is_none_or(|next| start_of(next, time_zone) > from))
     };
     fits.iter().find(|recorded| recorded.fit.is_of(circuit) && !changed(recorded.from))
 }
@@ -65,7 +72,11 @@ mod tests {
             .map(|i| {
                 let mains_v = 230.0 + 8.0 * (f64::from(i) / 40.0).sin();
                 let noise_v = 0.4 * (f64::from(i) * 2.3).sin();
-                Pair { at_ms: from.0 + i64::from(i) * 60_000, mains_v, rail_v: 1.01 * curve.rail_v(mains_v) + noise_v }
+                Pair {
+                    at_ms: from.0 + i64::from(i) * 60_000,
+                    mains_v,
+                    rail_v: 1.01 * curve.rail_v(mains_v) + noise_v,
+                }
             })
             .collect();
         let accuracy = Accuracy { mains: 0.002, rail: 0.002 };

@@ -1,6 +1,8 @@
 //! Programs that tests compare with or look through: Python with its reference libraries, a browser, a broker.
 //! `tests/peers/setup` installs them.
 
+#![allow(unreachable_pub, clippy::print_stderr, reason = "each test program uses its own part of the bench")]
+
 use std::path::{Path, PathBuf};
 
 /// Python with the libraries of `tests/peers/requirements.txt`; `None` (said on standard error) where it isn't
