@@ -1,6 +1,12 @@
 //! The solver against SciPy's stiff integrators on the full circuit equations: `tests/reference/supply.py` is written
-//! for itself, shares no method with the solver, and its figures are kept in `tests/reference/reference.json`.
-//! `tests/run` recomputes three of them, `tests/slow/reference` all.
+//! for itself, shares no method with the solver, and its figures are kept in `tests/reference/reference.json`. Three of
+//! them are computed again here, all by `tests/slow/run reference`.
+
+#[path = "support/peers.rs"]
+#[expect(dead_code, reason = "each test program uses its own part of the bench")]
+mod peers;
+
+use std::process::Command;
 
 use railtide::supply::{
     Capacitor, Circuit, Device, Doubtful, Dropper, Load, Loading, MainsWave, RectifierCircuit, Section,
@@ -232,4 +238,15 @@ fn every_circuit_agrees_with_the_reference() {
         }
     }
     assert!(wrong.is_empty(), "{} figures are off:\n{}", wrong.len(), wrong.join("\n"));
+}
+
+#[test]
+fn three_figures_of_the_reference_come_out_again() {
+    let Some(python) = peers::python() else { return };
+    let script = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/reference/reference.py");
+    let output =
+        Command::new(python).args(["-B", script, "--check", "--cases", "3"]).output().expect("it starts");
+    assert!(output.status.success(), "{}", String::from_utf8_lossy(&output.stderr));
+    // One line a case: what was asked for was done.
+    assert_eq!(String::from_utf8_lossy(&output.stderr).lines().count(), 3);
 }

@@ -2,7 +2,8 @@
 //! combined by JCGM 100 5.1.2. Every doubt is the half-width of a range in which any value is as likely as any other.
 
 use super::circuit::{Circuit, Dropper, Load, Loading};
-use super::steady::{SolveError, SolveOptions, sweep};
+use super::options::{SolveError, SolveOptions};
+use super::steady::sweep;
 use crate::quantity::{Uncertain, rectangular_u};
 
 /// A sine predicts a capacitor-input rail up to 4 % too high where the mains is flat-topped: third +2 % and fifth

@@ -20,6 +20,9 @@ const WIDE: f64 = 0.6;
 /// Each window is widened by this part of itself, since the next solution's lies a little beside it.
 const MARGIN: f64 = 0.12;
 
+/// A mesh is fitted anew when its fine part is this many times what conducts.
+const MOST_FINE: f64 = 1.5;
+
 /// One step: its start and length in fractions of the mains' period, and the unit-r.m.s. wave at its two stages.
 #[derive(Clone, Copy, Debug)]
 pub(super) struct Step {
@@ -32,12 +35,14 @@ pub(super) struct Step {
 #[derive(Clone, Debug)]
 pub(super) struct Mesh {
     pub(super) steps: Vec<Step>,
+    /// Where its steps are fine; empty where they are even.
+    fine: Vec<Window>,
 }
 
 impl Mesh {
     /// Even steps over `span` (a half or a whole period).
     pub(super) fn even(wave: &MainsWave, span: f64, steps: usize) -> Mesh {
-        Mesh::of(wave, &[(0.0, span, steps)])
+        Mesh::of(wave, &[(0.0, span, steps)], Vec::new())
     }
 
     /// About `steps` steps over `span`, most of them where a diode `conducts`; where that is nearly always, as behind a
@@ -49,13 +54,7 @@ impl Mesh {
         conducts: &[Window],
         overlaps: &[Window],
     ) -> Mesh {
-        let length = |windows: &[Window]| windows.iter().map(|(from, to)| to - from).sum::<f64>();
-        let Some((windows, share)) = [conducts, overlaps]
-            .map(|windows| widened(windows, span))
-            .into_iter()
-            .zip(SHARES)
-            .find(|(windows, _)| !windows.is_empty() && length(windows) <= WIDE * span)
-        else {
+        let Some((windows, share)) = deciding(span, conducts, overlaps, MARGIN) else {
             return Mesh::even(wave, span, steps);
         };
         let inside = length(&windows);
@@ -74,10 +73,17 @@ impl Mesh {
             at = to;
         }
         gap(&mut pieces, at, span);
-        Mesh::of(wave, &pieces)
+        Mesh::of(wave, &pieces, windows)
     }
 
-    fn of(wave: &MainsWave, pieces: &[(f64, f64, usize)]) -> Mesh {
+    /// Whether it is fine where it should be for these windows, and not over much more.
+    pub(super) fn suits(&self, span: f64, conducts: &[Window], overlaps: &[Window]) -> bool {
+        let Some((windows, _)) = deciding(span, conducts, overlaps, 0.0) else { return self.fine.is_empty() };
+        let held = |window: &Window| self.fine.iter().any(|fine| fine.0 <= window.0 && window.1 <= fine.1);
+        windows.iter().all(held) && length(&self.fine) <= MOST_FINE * length(&windows)
+    }
+
+    fn of(wave: &MainsWave, pieces: &[(f64, f64, usize)], fine: Vec<Window>) -> Mesh {
         let mut steps = Vec::new();
         for &(from, to, count) in pieces {
             let length = (to - from) / count as f64;
@@ -87,15 +93,28 @@ impl Mesh {
                 Step { start, length, wave }
             }));
         }
-        Mesh { steps }
+        Mesh { steps, fine }
     }
 }
 
+fn length(windows: &[Window]) -> f64 {
+    windows.iter().map(|(from, to)| to - from).sum()
+}
+
+/// The windows that want fine steps, widened by `margin` of themselves, and the share of the steps that they get.
+fn deciding(span: f64, conducts: &[Window], overlaps: &[Window], margin: f64) -> Option<(Vec<Window>, f64)> {
+    [conducts, overlaps]
+        .map(|windows| widened(windows, span, margin))
+        .into_iter()
+        .zip(SHARES)
+        .find(|(windows, _)| !windows.is_empty() && length(windows) <= WIDE * span)
+}
+
 /// Windows with their margins, those that meet made one.
-fn widened(windows: &[Window], span: f64) -> Vec<Window> {
+fn widened(windows: &[Window], span: f64, margin: f64) -> Vec<Window> {
     let mut merged: Vec<Window> = Vec::new();
     for &(from, to) in windows {
-        let margin = MARGIN * (to - from);
+        let margin = margin * (to - from);
         let (from, to) = ((from - margin).max(0.0), (to + margin).min(span));
         match merged.last_mut() {
             Some(last) if from <= last.1 => last.1 = last.1.max(to),

@@ -5,23 +5,30 @@
 
 mod circuit;
 mod curve;
+mod describe;
 mod device;
 mod discharge;
 mod doubt;
+#[cfg(test)]
+mod exact;
 mod findings;
 pub mod fit;
 mod measures;
 mod mesh;
 mod monotone;
 mod network;
+mod options;
 mod paths;
 mod period;
 mod projection;
 #[cfg(test)]
 mod published;
+mod rest;
 mod shooting;
+mod solver;
 mod stage;
 mod steady;
+mod tangent;
 #[cfg(test)]
 mod test_circuits;
 mod wave;
@@ -35,11 +42,10 @@ pub use discharge::{Discharge, SAFE_V, discharge};
 pub use findings::{
     CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
 };
+pub use options::{SolveError, SolveOptions, Warm};
 pub use projection::Grid;
-pub use steady::{
-    DropperState, NodeState, PowerBalance, SolveError, SolveOptions, Solver, SteadyState, Warm, Work,
-    steady_state, sweep,
-};
+pub use solver::Solver;
+pub use steady::{DropperState, NodeState, PowerBalance, SteadyState, Work, steady_state, sweep};
 
 use crate::quantity::Uncertain;
 

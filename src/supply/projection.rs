@@ -6,7 +6,8 @@ use std::sync::Arc;
 use super::circuit::{Circuit, Load, Loading};
 use super::curve::{RailCurve, SolvedCurve};
 use super::doubt;
-use super::steady::{SolveError, SolveOptions, sweep};
+use super::options::{SolveError, SolveOptions};
+use super::steady::sweep;
 use super::{Basis, NodeCurve, Projector};
 
 /// The mains voltages at which a curve is solved, evenly spaced.

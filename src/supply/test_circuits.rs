@@ -1,8 +1,8 @@
 //! Circuits that this room's tests share.
 
 use super::{
-    Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, MainsWave, RectifierCircuit, Section,
-    SeriesPart, Transformer, Winding,
+    Capacitor, Circuit, Device, Doubtful, Dropper, Heater, Load, Loading, MainsWave, RectifierCircuit,
+    Section, SeriesPart, SolveOptions, SteadyState, Transformer, Winding, steady_state,
 };
 
 /// A law of constant current.
@@ -139,4 +139,18 @@ pub(super) fn all() -> Vec<(String, Circuit)> {
         }
     }
     all
+}
+
+pub(super) fn solve(circuit: &Circuit, loading: Loading) -> SteadyState {
+    steady_state(circuit, circuit.transformer.wound_for_v, loading, &SolveOptions::default())
+        .expect("a steady state")
+}
+
+pub(super) fn idle(circuit: &Circuit) -> SteadyState {
+    solve(circuit, Loading::Idle)
+}
+
+#[track_caller]
+pub(super) fn near(what: &str, got: f64, want: f64, relative: f64) {
+    assert!((got / want - 1.0).abs() <= relative, "{what}: {got} and not {want} within {relative:e}");
 }

@@ -1,5 +1,6 @@
 """Recomputes the reference: `reference.py` all of it into reference.json, `--check` all against what is kept there,
-`--cases 3 --check` three of them spread over the list, `--time NAME` one, with its time. See supply.py."""
+`--cases 3 --check` three of them spread over the list, `--time NAME` the steady state of one, with its time.
+The method is in supply.py; the pinned libraries are those of tests/peers/requirements.txt."""
 
 import argparse
 import json
@@ -9,7 +10,7 @@ import sys
 import time
 
 from cases import cases
-from supply import Supply
+from supply import RTOL, Supply
 
 KEPT = pathlib.Path(__file__).with_name("reference.json")
 # What two runs on different machines and library builds may differ by.
@@ -41,14 +42,18 @@ def main():
     parser.add_argument("--cases", type=int, help="only so many, spread over the list")
     parser.add_argument("--check", action="store_true", help="compare with reference.json instead of writing it")
     parser.add_argument("--time", help="solve the case of that name and print its seconds and its first mean")
+    parser.add_argument("--rtol", type=float, default=RTOL, help="the integrator's relative tolerance, with --time")
     parser.add_argument("--jobs", type=int, default=1)
     options = parser.parse_args()
     todo = cases()
     assert len({case["name"] for case in todo}) == len(todo), "two cases of one name"
     if options.time:
-        _, result, why, seconds = solve(next(case for case in todo if case["name"] == options.time))
-        assert result, why
-        print(json.dumps({"seconds": seconds, "mean_v": result["nodes"][0]["mean_v"]}))
+        supply = Supply(next(case for case in todo if case["name"] == options.time), options.rtol)
+        start = time.perf_counter()
+        supply.steady()
+        seconds = time.perf_counter() - start
+        mean_v = supply.measure()["nodes"][0]["mean_v"]
+        print(json.dumps({"seconds": seconds, "mean_v": mean_v}))
         return 0
     if options.cases:
         todo = [todo[k * (len(todo) - 1) // max(options.cases - 1, 1)] for k in range(options.cases)]
