@@ -316,7 +316,9 @@ fn a_fit_finds_the_truth_is_kept_and_the_curve_follows_it() {
         let figure = |key: &str| of[format!("{key}_{unit}")].as_f64().unwrap();
         ((figure("fitted") - truth) / figure("fitted_u"), figure("fitted_u") / figure("nameplate_u"))
     };
-    for (off, shrunk) in [off(&made["secondary"], "v", 350.0 * 1.015), off(&made["source"], "ohm", 60.0 * 0.85)] {
+    for (off, shrunk) in
+        [off(&made["secondary"], "v", 350.0 * 1.015), off(&made["source"], "ohm", 60.0 * 0.85)]
+    {
         assert!(off.abs() < 1.0 && shrunk < 0.6, "{off} {shrunk}");
     }
     assert_eq!(made["told_apart"], true);
@@ -366,7 +368,8 @@ fn a_fit_finds_the_truth_is_kept_and_the_curve_follows_it() {
     let mut truth = circuit();
     truth.transformer.secondary_v.value *= 1.015;
     truth.transformer.source_ohm.value *= 0.85;
-    let truth_v = steady_state(&truth, 230.0, Loading::Idle, &SolveOptions::default()).unwrap().nodes[0].mean_v;
+    let truth_v =
+        steady_state(&truth, 230.0, Loading::Idle, &SolveOptions::default()).unwrap().nodes[0].mean_v;
     assert!((idle(&after, "mean_v") - truth_v).abs() < idle(&after, "u_v"));
     assert!((idle(&before, "mean_v") - truth_v).abs() > 3.0, "the nameplate is some volts off");
     assert!(idle(&after, "u_v") < idle(&before, "u_v"));
@@ -383,7 +386,16 @@ fn a_fit_finds_the_truth_is_kept_and_the_curve_follows_it() {
 fn a_fit_is_said_in_plain_words_and_without_standby_tells_that_it_cannot_tell() {
     let bench = desk(&format!("{FULL}{LOGGER}"));
     record_a_day(&bench);
-    let text = bench.say(&["fit", "hall", "--from", "2026-11-02 18:20", "--to", "2026-11-02 23:00", "--loading", "idle"]);
+    let text = bench.say(&[
+        "fit",
+        "hall",
+        "--from",
+        "2026-11-02 18:20",
+        "--to",
+        "2026-11-02 23:00",
+        "--loading",
+        "idle",
+    ]);
     assert_snapshot!(text, @r#"
     The supply of the hall, fitted to 280 pairs of mains and "reservoir" from Mon 2 Nov 18:20:00 to Mon 2 Nov 23:00:00.
       seen       unloaded 0, idle 280, loaded 0, warming up or switching 0, off 0; 0 outliers

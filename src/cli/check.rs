@@ -22,7 +22,9 @@ impl Check {
             .iter()
             .zip(&projectors)
             .zip(&parts)
-            .map(|((amplifier, projector), parts)| findings(amplifier, projector.as_ref(), parts, site.declared_v))
+            .map(|((amplifier, projector), parts)| {
+                findings(amplifier, projector.as_ref(), parts, site.declared_v)
+            })
             .collect();
         let rails = rail_watches(&site, &projectors);
         let understood =

@@ -117,7 +117,9 @@ impl Curve {
     /// The mains voltages that are asked for, rising.
     fn mains(&self, site: &Site) -> anyhow::Result<Vec<f64>> {
         let from = self.from.unwrap_or(USUAL_STEP_V * (0.9 * site.declared_v / USUAL_STEP_V).floor());
-        let to = self.to.unwrap_or_else(|| (USUAL_STEP_V * (1.1 * site.declared_v / USUAL_STEP_V - 1e-9).ceil()).max(from));
+        let to = self.to.unwrap_or_else(|| {
+            (USUAL_STEP_V * (1.1 * site.declared_v / USUAL_STEP_V - 1e-9).ceil()).max(from)
+        });
         let step = self.step.unwrap_or(USUAL_STEP_V);
         for (name, volts) in [("--from", from), ("--to", to)] {
             if !MAINS_V.contains(&volts) {

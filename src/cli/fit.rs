@@ -142,7 +142,12 @@ struct Record {
     width_ms: i64,
 }
 
-fn recorded_pairs(store: &Store, mains: &Channel, rail: &Channel, stretch: Stretch) -> anyhow::Result<Record> {
+fn recorded_pairs(
+    store: &Store,
+    mains: &Channel,
+    rail: &Channel,
+    stretch: Stretch,
+) -> anyhow::Result<Record> {
     let longest = mains.sample_period.max(rail.sample_period).as_millis() as i64;
     let width_ms = PAIR_MS.max(longest);
     let stored = store.channels()?;

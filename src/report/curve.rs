@@ -160,7 +160,10 @@ fn table(points: &[&CurvePoint], out: &mut impl fmt::Write) -> fmt::Result {
     for point in points {
         let mut row = vec![format!("{} V", plain(point.mains_v))];
         for node in &point.nodes {
-            row.extend([Uncertain::new(node.mean_v, node.u_v).to_string(), format!("{:.1} V", node.ripple_vpp)]);
+            row.extend([
+                Uncertain::new(node.mean_v, node.u_v).to_string(),
+                format!("{:.1} V", node.ripple_vpp),
+            ]);
         }
         row.push(format!("{:.0} / {:.0} mA", 1e3 * point.winding_rms_a, 1e3 * point.winding_peak_a));
         row.push(format!("{:.0} / {:.0} mA", 1e3 * point.diode_rms_a, 1e3 * point.diode_peak_a));
@@ -170,8 +173,9 @@ fn table(points: &[&CurvePoint], out: &mut impl fmt::Write) -> fmt::Result {
         row.extend(point.heater_v.map(|v| format!("{v:.2} V")));
         rows.push(row);
     }
-    let widths: Vec<usize> =
-        (0..rows[0].len()).map(|i| rows.iter().map(|row| row[i].chars().count()).max().unwrap_or(0)).collect();
+    let widths: Vec<usize> = (0..rows[0].len())
+        .map(|i| rows.iter().map(|row| row[i].chars().count()).max().unwrap_or(0))
+        .collect();
     for row in rows {
         let cells: Vec<String> =
             row.iter().zip(&widths).map(|(cell, width)| format!("{cell:>width$}", width = *width)).collect();

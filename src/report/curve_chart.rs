@@ -24,7 +24,8 @@ pub fn curve_svg(report: &CurveReport, node: &str, out: &mut impl fmt::Write) ->
         report.loadings().into_iter().map(|loading| (loading, dots(report, loading, node))).collect();
     let all = || lines.iter().flat_map(|(_, dots)| dots);
     let across = Scale::over(all().map(|dot| dot.mains_v), LEFT, WIDTH - RIGHT);
-    let up = Scale::over(all().flat_map(|dot| [dot.rail_v - dot.u_v, dot.rail_v + dot.u_v]), HEIGHT - BOTTOM, TOP);
+    let up =
+        Scale::over(all().flat_map(|dot| [dot.rail_v - dot.u_v, dot.rail_v + dot.u_v]), HEIGHT - BOTTOM, TOP);
     let name = escaped(&format!("{}, {node}: rail by mains", report.amplifier));
     writeln!(
         out,
@@ -37,17 +38,36 @@ pub fn curve_svg(report: &CurveReport, node: &str, out: &mut impl fmt::Write) ->
         let x = across.at(tick);
         let (top, bottom) = (TOP, HEIGHT - BOTTOM);
         writeln!(out, "<path d=\"M{x:.1} {top}V{bottom}\" stroke=\"{INK}\" stroke-opacity=\"0.12\"/>")?;
-        writeln!(out, "<text x=\"{x:.1}\" y=\"{}\" text-anchor=\"middle\">{}</text>", bottom + 16.0, plain(tick))?;
+        writeln!(
+            out,
+            "<text x=\"{x:.1}\" y=\"{}\" text-anchor=\"middle\">{}</text>",
+            bottom + 16.0,
+            plain(tick)
+        )?;
     }
     for tick in up.ticks() {
         let y = up.at(tick);
         let right = WIDTH - RIGHT;
         writeln!(out, "<path d=\"M{LEFT} {y:.1}H{right}\" stroke=\"{INK}\" stroke-opacity=\"0.12\"/>")?;
-        writeln!(out, "<text x=\"{}\" y=\"{:.1}\" text-anchor=\"end\">{}</text>", LEFT - 6.0, y + 4.0, plain(tick))?;
+        writeln!(
+            out,
+            "<text x=\"{}\" y=\"{:.1}\" text-anchor=\"end\">{}</text>",
+            LEFT - 6.0,
+            y + 4.0,
+            plain(tick)
+        )?;
     }
     let middle = (LEFT + WIDTH - RIGHT) / 2.0;
-    writeln!(out, "<text x=\"{middle}\" y=\"{}\" text-anchor=\"middle\">mains, V r.m.s.</text>", HEIGHT - 12.0)?;
-    writeln!(out, "<text transform=\"translate(16 {}) rotate(-90)\" text-anchor=\"middle\">rail, V</text>", HEIGHT / 2.0)?;
+    writeln!(
+        out,
+        "<text x=\"{middle}\" y=\"{}\" text-anchor=\"middle\">mains, V r.m.s.</text>",
+        HEIGHT - 12.0
+    )?;
+    writeln!(
+        out,
+        "<text transform=\"translate(16 {}) rotate(-90)\" text-anchor=\"middle\">rail, V</text>",
+        HEIGHT / 2.0
+    )?;
     for (loading, dots) in &lines {
         line(*loading, dots, &across, &up, out)?;
     }
@@ -69,7 +89,13 @@ fn dots(report: &CurveReport, loading: Loading, node: &str) -> Vec<Dot> {
     report.points.iter().filter(|point| point.loading == loading).filter_map(of).collect()
 }
 
-fn line(loading: Loading, dots: &[Dot], across: &Scale, up: &Scale, out: &mut impl fmt::Write) -> fmt::Result {
+fn line(
+    loading: Loading,
+    dots: &[Dot],
+    across: &Scale,
+    up: &Scale,
+    out: &mut impl fmt::Write,
+) -> fmt::Result {
     let (dashes, colour) = match loading {
         Loading::Unloaded => ("2 4", INK),
         Loading::Idle => ("none", BRASS),

@@ -63,7 +63,11 @@ pub fn finding_sentence(finding: &Finding) -> String {
             }
         ),
         Finding::Unloaded { node, rail_v, u_v, most_v, surge } => {
-            let what = if *surge { "surge voltage (the warm-up is brief)" } else { "working voltage (it waits in standby)" };
+            let what = if *surge {
+                "surge voltage (the warm-up is brief)"
+            } else {
+                "working voltage (it waits in standby)"
+            };
             let doubt = if rail_v <= most_v && rail_v + u_v > *most_v { "; within its doubt" } else { "" };
             format!(
                 "With cold valves the capacitor at \"{node}\" meets {rail_v:.0} V ± {u_v:.0} V; its {what} is \
@@ -78,9 +82,9 @@ pub fn finding_sentence(finding: &Finding) -> String {
             "At idle the capacitor at \"{node}\" meets {rail_v:.0} V, ripple included; its working voltage is \
              {most_v:.0} V."
         ),
-        Finding::Dissipation { valve, heat_w, most_w } => format!(
-            "Each {valve} turns {heat_w:.1} W into heat at idle; its sheet allows {most_w:.0} W."
-        ),
+        Finding::Dissipation { valve, heat_w, most_w } => {
+            format!("Each {valve} turns {heat_w:.1} W into heat at idle; its sheet allows {most_w:.0} W.")
+        }
         Finding::Heater { heater_v, nominal_v, tolerance_pct } => format!(
             "The heaters get {heater_v:.2} V; {nominal_v} V ± {tolerance_pct} % is {:.2} to {:.2} V.",
             nominal_v * (1.0 - tolerance_pct / 100.0),
@@ -89,7 +93,9 @@ pub fn finding_sentence(finding: &Finding) -> String {
         Finding::Core { ratio, most } => format!(
             "The core is driven at {ratio:.3} times what it was wound for{}.",
             if ratio > most {
-                format!(", over {most}: it runs hot; no dropper in the rail helps it, another tap or a bucking winding does")
+                format!(
+                    ", over {most}: it runs hot; no dropper in the rail helps it, another tap or a bucking winding does"
+                )
             } else {
                 String::new()
             }

@@ -133,13 +133,25 @@ pub fn fit_text(report: &FitReport, out: &mut impl fmt::Write) -> fmt::Result {
     )?;
     writeln!(out, "  mains      {:.1} to {:.1} V", report.mains_min_v, report.mains_max_v)?;
     let s = report.secondary;
-    writeln!(out, "  secondary  {:.1} V ± {:.1} V  (config: {:.1} V ± {:.1} V)", s.fitted, s.fitted_u, s.nameplate, s.nameplate_u)?;
+    writeln!(
+        out,
+        "  secondary  {:.1} V ± {:.1} V  (config: {:.1} V ± {:.1} V)",
+        s.fitted, s.fitted_u, s.nameplate, s.nameplate_u
+    )?;
     if let Some(o) = report.source {
-        writeln!(out, "  source     {:.1} Ω ± {:.1} Ω  (config: {:.1} Ω ± {:.1} Ω)", o.fitted, o.fitted_u, o.nameplate, o.nameplate_u)?;
+        writeln!(
+            out,
+            "  source     {:.1} Ω ± {:.1} Ω  (config: {:.1} Ω ± {:.1} Ω)",
+            o.fitted, o.fitted_u, o.nameplate, o.nameplate_u
+        )?;
     }
     if let Some(a) = report.idle {
-        let [fitted, u, nameplate, nameplate_u] = [a.fitted, a.fitted_u, a.nameplate, a.nameplate_u].map(|a| 1e3 * a);
-        writeln!(out, "  idle       {fitted:.1} mA ± {u:.1} mA  (config: {nameplate:.1} mA ± {nameplate_u:.1} mA)")?;
+        let [fitted, u, nameplate, nameplate_u] =
+            [a.fitted, a.fitted_u, a.nameplate, a.nameplate_u].map(|a| 1e3 * a);
+        writeln!(
+            out,
+            "  idle       {fitted:.1} mA ± {u:.1} mA  (config: {nameplate:.1} mA ± {nameplate_u:.1} mA)"
+        )?;
     }
     writeln!(
         out,
@@ -160,7 +172,8 @@ pub fn fit_text(report: &FitReport, out: &mut impl fmt::Write) -> fmt::Result {
         out,
         "{}",
         match (report.kept, report.used) {
-            (true, true) => "It is kept, and the rails are projected by it from now on (by a running daemon from its next start).",
+            (true, true) =>
+                "It is kept, and the rails are projected by it from now on (by a running daemon from its next start).",
             (true, false) => "It is kept, but not used: the service log has a later entry.",
             (false, _) => "It is not kept.",
         }

@@ -6,8 +6,8 @@ use super::findings::finding_sentence;
 use crate::config::Amplifier;
 use crate::quantity::Uncertain;
 use crate::supply::{
-    Basis, Circuit, Device, Doubtful, Dropper, Finding, Load, Loading, Projector, RectifierCircuit, SeriesPart,
-    Winding,
+    Basis, Circuit, Device, Doubtful, Dropper, Finding, Load, Loading, Projector, RectifierCircuit,
+    SeriesPart, Winding,
 };
 use crate::watch::Projecting;
 

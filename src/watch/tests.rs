@@ -318,7 +318,12 @@ fn idle_v(site: &Site, mains_v: f64) -> f64 {
 
 /// The alarm of that condition, if it's active after what was decided.
 fn raised<'d>(decided: &'d Decided, condition: &str) -> Option<&'d AlarmRecord> {
-    decided.alarms.iter().rev().find(|a| a.key.condition == condition).filter(|a| a.state == State::Unacknowledged)
+    decided
+        .alarms
+        .iter()
+        .rev()
+        .find(|a| a.key.condition == condition)
+        .filter(|a| a.state == State::Unacknowledged)
 }
 
 #[test]
