@@ -11,10 +11,11 @@ use crate::clock::Clock;
 use crate::config::{Amplifier, Channel, Site};
 use crate::mains::start_of;
 use crate::quantity::Utc;
+use crate::reading::ChannelId;
 use crate::report::{FitReport, LocalTime, fit_text};
 use crate::store::Store;
 use crate::supply::Loading;
-use crate::supply::fit::{Accuracy, Pair, RecordedFit, Sampled, fit, pairs};
+use crate::supply::fit::{Accuracy, Pair, RecordedFit, fit, pairs};
 use crate::watch::{mains_channel, valid_fit};
 
 /// The shortest stretch over which mains and rail make one pair.
@@ -151,19 +152,27 @@ fn recorded_pairs(
     let longest = mains.sample_period.max(rail.sample_period).as_millis() as i64;
     let width_ms = PAIR_MS.max(longest);
     let stored = store.channels()?;
-    let sound = |channel: &Channel| -> anyhow::Result<Vec<Sampled>> {
-        let Some(known) = stored.iter().find(|s| s.name == channel.name) else { return Ok(Vec::new()) };
-        // Medians of stretches as they come: a year of seconds need not lie in memory.
-        let mut sampled = Vec::new();
-        for reading in store.readings(known.id, stretch.from, stretch.to) {
-            let reading = reading?;
-            if reading.quality.value_is_sound() {
-                sampled.push((reading.at.0, reading.value.volts()));
-            }
-        }
-        Ok(sampled)
+    let mut failed = None;
+    let [of_mains, of_rail] = [mains, rail].map(|channel| stored.iter().find(|s| s.name == channel.name));
+    let (Some(of_mains), Some(of_rail)) = (of_mains, of_rail) else {
+        return Ok(Record { pairs: Vec::new(), width_ms });
     };
-    Ok(Record { pairs: pairs(sound(mains)?, sound(rail)?, width_ms), width_ms })
+    // One after the other and as they come: a year of seconds need not lie in memory.
+    let failure = std::cell::RefCell::new(&mut failed);
+    let sound = |id: ChannelId| {
+        store.readings(id, stretch.from, stretch.to).filter_map(|reading| match reading {
+            Ok(reading) => reading.quality.value_is_sound().then(|| (reading.at.0, reading.value.volts())),
+            Err(error) => {
+                failure.borrow_mut().get_or_insert(error);
+                None
+            }
+        })
+    };
+    let pairs = pairs(sound(of_mains.id), sound(of_rail.id), width_ms);
+    match failed {
+        Some(error) => Err(error.into()),
+        None => Ok(Record { pairs, width_ms }),
+    }
 }
 
 /// Both channels' accuracy as fractions of what they usually read.

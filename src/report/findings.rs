@@ -100,10 +100,6 @@ pub fn finding_sentence(finding: &Finding) -> String {
                 String::new()
             }
         ),
-        Finding::SoftSource { source_ohm, load_ohm } => format!(
-            "A source resistance of {source_ohm:.0} Ω is more than a tenth of the load, {load_ohm:.0} Ω at idle: is it \
-             that of one path?"
-        ),
         Finding::Unsolved { loading, why } => format!("Nothing is known of it {}: {why}.", loading.word()),
     }
 }

@@ -168,13 +168,6 @@ pub enum Finding {
         /// [`CORE_LIMIT`].
         most: f64,
     },
-    /// The source resistance is a large part of the load, so that the rail is soft.
-    SoftSource {
-        /// In one path, Ω.
-        source_ohm: f64,
-        /// The load at idle, Ω.
-        load_ohm: f64,
-    },
     /// A loading at which the circuit has no answer.
     Unsolved {
         /// Loading.
@@ -204,7 +197,7 @@ impl Finding {
                 (heater_v / nominal_v - 1.0).abs() > tolerance_pct / 100.0
             }
             Finding::Core { ratio, most } => ratio > most,
-            Finding::SoftSource { .. } | Finding::Unsolved { .. } => true,
+            Finding::Unsolved { .. } => true,
         }
     }
 }
@@ -316,14 +309,6 @@ pub fn rectifier_findings(
         });
     }
     findings
-}
-
-/// Whether the rail is soft: a source resistance above a tenth of the load in the steady state at idle.
-pub fn soft_source(circuit: &Circuit, idle: &SteadyState) -> Option<Finding> {
-    let drawn_a: f64 = idle.nodes.iter().map(|node| node.load_a).sum();
-    let load_ohm = idle.nodes.first()?.mean_v / drawn_a;
-    let source_ohm = circuit.transformer.source_ohm.value;
-    (source_ohm > load_ohm / 10.0).then_some(Finding::SoftSource { source_ohm, load_ohm })
 }
 
 fn discharge_findings(circuit: &Circuit, from_v: &[f64], standby_after: Option<usize>) -> Vec<Finding> {

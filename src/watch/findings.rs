@@ -5,7 +5,7 @@ use crate::config::{Amplifier, Standby, rectifier};
 use crate::quantity::Uncertain;
 use crate::supply::{
     Circuit, Device, Finding, Loading, Projector, RectifierSheet, SolveOptions, SteadyState,
-    circuit_findings, rectifier_findings, soft_source, steady_state,
+    circuit_findings, rectifier_findings, steady_state,
 };
 
 /// The findings of `amplifier`, faults and figures that are good to know alike ([`Finding::is_wrong`] tells them
@@ -38,7 +38,6 @@ pub fn findings(
         findings.extend(rectifier_findings(circuit, &sheet, declared_v, &states));
     }
     if let Some(idle) = states.iter().find(|state| state.loading == Loading::Idle) {
-        findings.extend(soft_source(circuit, idle));
         findings.extend(idle_capacitors(circuit, idle));
     }
     findings.extend(parts.capacitors().iter().map(|capacitor| Finding::Unloaded {
