@@ -4,7 +4,8 @@ use std::path::PathBuf;
 
 use clap::Args;
 
-use crate::report::understood_text;
+use crate::report::{Understood, understood_text};
+use crate::watch::{findings, part_watches, rail_watches};
 
 /// Arguments of `check`.
 #[derive(Debug, Args)]
@@ -13,8 +14,23 @@ pub(super) struct Check {}
 impl Check {
     pub(super) fn run(self, config: Option<PathBuf>) -> anyhow::Result<()> {
         let site = super::site::load(config)?;
+        let projections = super::site::projections(&site)?;
+        let projectors: Vec<_> = projections.iter().map(|p| p.projector.clone()).collect();
+        let parts = part_watches(&site, &projectors);
+        let findings: Vec<_> = site
+            .amplifiers
+            .iter()
+            .zip(&projectors)
+            .zip(&parts)
+            .map(|((amplifier, projector), parts)| {
+                findings(amplifier, projector.as_ref(), parts, site.declared_v)
+            })
+            .collect();
+        let rails = rail_watches(&site, &projectors);
+        let understood =
+            Understood { site: &site, projections: &projections, rails: &rails, findings: &findings };
         let mut text = String::new();
-        understood_text(&site, &super::site::rails(&site)?, &mut text)?;
+        understood_text(understood, &mut text)?;
         for warning in &site.warnings {
             text += &format!("Unlikely: {warning}\n");
         }

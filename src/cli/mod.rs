@@ -5,8 +5,10 @@
 
 mod alarm;
 mod check;
+mod curve;
 mod demo;
 mod export;
+mod fit;
 mod import;
 mod listen;
 mod now;
@@ -53,6 +55,10 @@ enum Command {
     Listen(listen::Listen),
     /// Says where mains and rails stand, the headroom, and how old the figures are.
     Now(now::Now),
+    /// Mains to rails for each loading, solved from the supply's circuit.
+    Curve(curve::Curve),
+    /// Fits the supply's model to recorded pairs of mains and rail.
+    Fit(fit::FitCommand),
     /// Lists alarms, or acknowledges one.
     Alarm(alarm::Alarm),
     /// Shows the household's day by time of day, time above the limits, and the tide table of the hours to come.
@@ -89,6 +95,8 @@ pub fn main() -> ExitCode {
         Command::Ports(ports) => ports.run(),
         Command::Listen(listen) => listen.run(config),
         Command::Now(now) => now.run(config),
+        Command::Curve(curve) => curve.run(config),
+        Command::Fit(fit) => fit.run(config),
         Command::Alarm(alarm) => alarm.run(config),
         Command::Profile(profile) => profile.run(config),
         Command::Week(week) => week.run(config),

@@ -50,30 +50,31 @@ pub(super) fn open_record(site: &Site) -> anyhow::Result<Store> {
     Ok(Store::open_read_only(&site.store.path)?)
 }
 
-/// The newest fit of each amplifier that still holds. A site without a record has none.
-pub(super) fn fits(site: &Site) -> anyhow::Result<Vec<Option<RecordedFit>>> {
+/// The amplifier called `name`, or a sentence that names those there are.
+pub(super) fn amplifier<'s>(site: &'s Site, name: &str) -> anyhow::Result<&'s Amplifier> {
+    site.amplifier(name).with_context(|| {
+        let there: Vec<&str> = site.amplifiers.iter().map(|a| a.name.as_str()).collect();
+        match there.is_empty() {
+            true => "the config has no [[amplifier]]; add one".to_owned(),
+            false => format!("the config has no amplifier {name}; there are {}", there.join(", ")),
+        }
+    })
+}
+
+/// The newest fit of `amplifier` that still holds. A site without a record has none.
+pub(super) fn fit(site: &Site, amplifier: &Amplifier) -> anyhow::Result<Option<RecordedFit>> {
     let store = match Store::open_read_only(&site.store.path) {
         Ok(store) => store,
-        Err(StoreError::Missing { .. } | StoreError::NoFolder { .. }) => {
-            return Ok(vec![None; site.amplifiers.len()]);
-        }
+        Err(StoreError::Missing { .. } | StoreError::NoFolder { .. }) => return Ok(None),
         Err(other) => return Err(other.into()),
     };
-    let newest = |amplifier: &Amplifier| {
-        Ok(valid_fit(amplifier, &store.fits(&amplifier.name)?, site.time_zone).cloned())
-    };
-    site.amplifiers.iter().map(newest).collect()
+    Ok(valid_fit(amplifier, &store.fits(&amplifier.name)?, site.time_zone).cloned())
 }
 
 /// What each amplifier's rails are projected by.
 pub(super) fn projections(site: &Site) -> anyhow::Result<Vec<Projecting>> {
-    let fits = fits(site)?;
-    Ok(site
-        .amplifiers
-        .iter()
-        .zip(&fits)
-        .map(|(amplifier, fit)| projecting(amplifier, fit.as_ref()))
-        .collect())
+    let of = |amplifier| Ok(projecting(amplifier, fit(site, amplifier)?.as_ref()));
+    site.amplifiers.iter().map(of).collect()
 }
 
 /// Every limit of the site with its projection.

@@ -1,6 +1,8 @@
 //! Amplifiers of the config: name, use, the short way of stating a supply, limits, service log. The full way is in
 //! `circuit`.
 
+use std::collections::HashMap;
+
 use super::circuit::{SiteMains, read_supply};
 use super::complaint::At;
 use super::full_way::is_full_way;
@@ -72,6 +74,7 @@ fn read_amplifier<'a>(table: Table<'a>, mains: &SiteMains) -> ReadAmplifier<'a> 
     let stage = supply.output.as_ref().and_then(Option::as_ref);
     let limit_tables = table.tables("limit", "[[amplifier.limit]]", LIMIT);
     let limits: Vec<_> = limit_tables.iter().map(|limit| read_limit(*limit, stage)).collect();
+    complain_of_double_limits(&limit_tables);
     let events: Vec<_> =
         table.tables("event", "[[amplifier.event]]", EVENT).into_iter().map(read_event).collect();
 
@@ -172,6 +175,29 @@ fn read_limit(table: Table<'_>, stage: Option<&OutputStage>) -> Option<Limit> {
     let usual_why = valve.map(|(row, _)| format!("highest anode voltage by the sheet of {}", row.type_name));
     let why = table.key("why").text().map(|why| why.value).or(usual_why).unwrap_or_default();
     Some(Limit { node: node?.value, max_v: max_v?, min_v, rating, loading, why })
+}
+
+/// Complains about a second limit on one node at one loading: the two would be one alarm, and the stricter one is all
+/// that counts. (One at another loading is an alarm of its own.)
+fn complain_of_double_limits(tables: &[Table<'_>]) {
+    let usual = Loading::Idle.word();
+    let mut seen = HashMap::new();
+    for table in tables {
+        let (entry, loading) = (table.key("node"), table.key("loading").peek().unwrap_or(usual));
+        let Some(node) = entry.peek() else { continue };
+        match seen.get(&(node, loading)) {
+            Some(first) => {
+                let line = table.notes().line(*first);
+                entry.refuse::<()>(&format!(
+                    "the limit of line {line} is on the same node at loading {loading}; expected another node or \
+                     loading, or only the stricter of the two"
+                ));
+            }
+            None => {
+                seen.insert((node, loading), entry.span());
+            }
+        }
+    }
 }
 
 /// The output valve that `max_v = "valve"` means, and the stage that it works in.

@@ -5,17 +5,26 @@
 
 mod alarms;
 pub mod chart;
+mod curve;
+mod curve_chart;
 pub mod export;
+mod findings;
+mod fit;
 mod notice;
 mod profile;
 mod standing;
+mod supply;
 mod time;
 mod understood;
 pub mod week;
 
 pub use alarms::{AlarmLine, AlarmList, alarms_text};
+pub use curve::{CurveDropper, CurveNode, CurvePoint, CurveReport, curve_csv, curve_text};
+pub use curve_chart::curve_svg;
+pub use findings::finding_sentence;
+pub use fit::{Amperes, FitReport, Ohms, Volts, fit_text};
 pub use notice::{CAUTION, NoticeText, notice_text};
 pub use profile::{Known, Profile, profile_csv, profile_html, profile_text};
 pub use standing::{ChannelStanding, RailStanding, Standing, standing_text};
 pub use time::{LocalTime, ago, span};
-pub use understood::understood_text;
+pub use understood::{Understood, understood_text};

@@ -2,12 +2,28 @@
 
 use std::fmt;
 
+use super::supply;
 use super::time::span;
 use crate::config::{Channel, Rating, Receiver, Route, Site};
-use crate::watch::RailWatch;
+use crate::supply::Finding;
+use crate::watch::{Projecting, RailWatch};
+
+/// A checked config and what follows from it.
+#[derive(Clone, Copy, Debug)]
+pub struct Understood<'a> {
+    /// The config.
+    pub site: &'a Site,
+    /// What each amplifier's rails are projected by.
+    pub projections: &'a [Projecting],
+    /// Every limit.
+    pub rails: &'a [RailWatch],
+    /// Each amplifier's findings.
+    pub findings: &'a [Vec<Finding>],
+}
 
 /// Says back a checked config.
-pub fn understood_text(site: &Site, rails: &[RailWatch], out: &mut impl fmt::Write) -> fmt::Result {
+pub fn understood_text(understood: Understood<'_>, out: &mut impl fmt::Write) -> fmt::Result {
+    let Understood { site, projections, rails, findings } = understood;
     writeln!(
         out,
         "The site \"{}\" keeps the time of {}; its mains is declared {} V at {} Hz.",
@@ -40,14 +56,18 @@ pub fn understood_text(site: &Site, rails: &[RailWatch], out: &mut impl fmt::Wri
     if site.amplifiers.is_empty() {
         writeln!(out, "No amplifier: mains is recorded, no rail is projected.")?;
     }
-    for amplifier in &site.amplifiers {
+    for ((amplifier, projecting), findings) in site.amplifiers.iter().zip(projections).zip(findings) {
         writeln!(out, "{}", supply_sentence(amplifier))?;
+        for sentence in supply::sentences(amplifier, projecting, site.declared_v) {
+            writeln!(out, "  {sentence}")?;
+        }
         if amplifier.limits.is_empty() {
             writeln!(out, "  It has no limit, so nothing can warn about it: add an [[amplifier.limit]].")?;
         }
         for rail in rails.iter().filter(|rail| rail.amplifier == amplifier.name) {
             writeln!(out, "  {}", limit_sentence(rail))?;
         }
+        supply::findings_text(findings, site.declared_v, out)?;
     }
     for change in &site.alarms {
         let what = if change.enabled { "is changed by the config" } else { "is switched off by the config" };
@@ -83,6 +103,7 @@ fn channel_sentence(channel: &Channel) -> String {
 fn supply_sentence(amplifier: &crate::config::Amplifier) -> String {
     let name = &amplifier.name;
     match &amplifier.measured {
+        _ if amplifier.circuit.is_some() => format!("The amplifier \"{name}\":"),
         Some(m) => format!(
             "The amplifier \"{name}\": \"{}\" follows mains in proportion, from {} V measured at {} V of mains \
              ({}, meter ±{} %). Other loadings and nodes are unknown.",

@@ -120,6 +120,20 @@ pub enum Finding {
         /// Whether that is its surge voltage (a brief warm-up) and not its working voltage.
         surge: bool,
     },
+    /// A limit that is passed at the declared voltage already. A design-centre figure is compared with the rail there
+    /// and nowhere else: it allows for what mains does about it.
+    Limit {
+        /// The node.
+        node: String,
+        /// Loading at which the limit holds.
+        loading: Loading,
+        /// The rail, V.
+        rail_v: f64,
+        /// Its expanded uncertainty (k = 2), V.
+        u_v: f64,
+        /// The limit, V.
+        most_v: f64,
+    },
     /// A capacitor's working voltage against the idle rail at the declared voltage.
     Idle {
         /// Its node.
@@ -154,13 +168,6 @@ pub enum Finding {
         /// [`CORE_LIMIT`].
         most: f64,
     },
-    /// The source resistance is a large part of the load, so that the rail is soft.
-    SoftSource {
-        /// In one path, Ω.
-        source_ohm: f64,
-        /// The load at idle, Ω.
-        load_ohm: f64,
-    },
     /// A loading at which the circuit has no answer.
     Unsolved {
         /// Loading.
@@ -182,15 +189,15 @@ impl Finding {
             Finding::RectifierPeak { peak_a, most_a, .. } => peak_a > most_a,
             Finding::RectifierInverse { inverse_v, most_v, .. } => inverse_v > most_v,
             Finding::ChokeInput { bleeder_a, critical_a, .. } => bleeder_a < critical_a,
-            Finding::Unloaded { rail_v, most_v, .. } | Finding::Idle { rail_v, most_v, .. } => {
-                rail_v > most_v
-            }
+            Finding::Unloaded { rail_v, most_v, .. }
+            | Finding::Idle { rail_v, most_v, .. }
+            | Finding::Limit { rail_v, most_v, .. } => rail_v > most_v,
             Finding::Dissipation { heat_w, most_w, .. } => heat_w > most_w,
             Finding::Heater { heater_v, nominal_v, tolerance_pct } => {
                 (heater_v / nominal_v - 1.0).abs() > tolerance_pct / 100.0
             }
             Finding::Core { ratio, most } => ratio > most,
-            Finding::SoftSource { .. } | Finding::Unsolved { .. } => true,
+            Finding::Unsolved { .. } => true,
         }
     }
 }
@@ -302,14 +309,6 @@ pub fn rectifier_findings(
         });
     }
     findings
-}
-
-/// Whether the rail is soft: a source resistance above a tenth of the load in the steady state at idle.
-pub fn soft_source(circuit: &Circuit, idle: &SteadyState) -> Option<Finding> {
-    let drawn_a: f64 = idle.nodes.iter().map(|node| node.load_a).sum();
-    let load_ohm = idle.nodes.first()?.mean_v / drawn_a;
-    let source_ohm = circuit.transformer.source_ohm.value;
-    (source_ohm > load_ohm / 10.0).then_some(Finding::SoftSource { source_ohm, load_ohm })
 }
 
 fn discharge_findings(circuit: &Circuit, from_v: &[f64], standby_after: Option<usize>) -> Vec<Finding> {

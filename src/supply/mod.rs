@@ -39,9 +39,7 @@ pub use circuit::{
 };
 pub use curve::{Measured, RailCurve, SolvedCurve};
 pub use discharge::{Discharge, SAFE_V, discharge};
-pub use findings::{
-    CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings, soft_source,
-};
+pub use findings::{CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_ratio, rectifier_findings};
 pub use options::{SolveError, SolveOptions, Warm};
 pub use projection::Grid;
 pub use solver::Solver;

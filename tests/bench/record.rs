@@ -240,7 +240,10 @@ fn week(database: &Path, folder: &Path, store: &Store, ids: &[ChannelId], end: U
     });
     show("a week of two channels as CSV with local times (goal 8)", ours, peer);
     for (what, command) in [
-        ("a week's report from a year's record (goal 0.5 s)", vec!["week", "--from", &day(from), "--to", &day(end)]),
+        (
+            "a week's report from a year's record (goal 0.5 s)",
+            vec!["week", "--from", &day(from), "--to", &day(end)],
+        ),
         ("a profile of a year (goal 1 s)", vec!["profile", "--from", &day(Utc(START)), "--to", &day(end)]),
     ] {
         let taken = median(|| {

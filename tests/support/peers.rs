@@ -1,7 +1,12 @@
 //! Programs that tests compare with or look through: Python with its reference libraries, a browser, a broker.
 //! `tests/peers/setup` installs them.
 
-#![allow(dead_code, unreachable_pub, clippy::print_stderr, reason = "each test program uses its own part of the bench")]
+#![allow(
+    dead_code,
+    unreachable_pub,
+    clippy::print_stderr,
+    reason = "each test program uses its own part of the bench"
+)]
 
 use std::path::{Path, PathBuf};
 

@@ -2,7 +2,9 @@
 //!
 //! With a pair's recorded mains m and rail r the model is
 //!
-//!     r = (1 + g_r)·(1 + c·z)·f(m/(1 + g_m)·(1 + s), 1 + p),   z = (m − m₀)/m₁
+//! ```text
+//! r = (1 + g_r)·(1 + c·z)·f(m/(1 + g_m)·(1 + s), 1 + p),   z = (m − m₀)/m₁
+//! ```
 //!
 //! s, p: secondary and second parameter, relative to their nameplates; g_m, g_r: gain errors of the two channels; c:
 //! how much the mains' crest (which the rail follows) moves from one end of the recorded mains to the other. At idle
