@@ -233,7 +233,7 @@ railtide.toml:1: [[site]]: expected the table [site]
 #[test]
 fn an_unknown_key_is_met_with_the_nearest_one_and_its_value_is_not_shown() {
     assert_snapshot!(complaints_after_site("wtch = 1\n[store]\ncolour = 3\ncomit_every = \"5 s\"\n[[loger]]\n"), @r#"
-railtide.toml:2: wtch: no key of the top level, which knows site, store, logger, channel, amplifier, alarm, receiver
+railtide.toml:2: wtch: no key of the top level, which knows site, store, logger, channel, amplifier, alarm, receiver, rule
 railtide.toml:4: colour: no key of [store], which knows path, commit_every, keep_readings
 railtide.toml:5: comit_every: no key of [store]; did you mean commit_every, for example commit_every = "10 s"?
 railtide.toml:6: loger: no key of the top level; did you mean logger, for example [[logger]]?
