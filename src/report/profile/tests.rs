@@ -1,3 +1,5 @@
+//! A small hall by hand: every figure of its profile can be worked out on paper.
+
 use super::*;
 use crate::alarm::CONDITIONS;
 use crate::config::Surroundings;
