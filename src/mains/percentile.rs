@@ -27,7 +27,8 @@ impl Distribution {
     pub fn weighted(pairs: impl IntoIterator<Item = (f64, f64)>) -> Self {
         let mut pairs: Vec<(f64, f64)> =
             pairs.into_iter().filter(|(v, w)| v.is_finite() && w.is_finite() && *w > 0.0).collect();
-        pairs.sort_unstable_by(|a, b| a.0.total_cmp(&b.0));
+        // By weight too, so that the order in which equal values came never matters.
+        pairs.sort_unstable_by(|a, b| a.0.total_cmp(&b.0).then(a.1.total_cmp(&b.1)));
         let mut middles = Vec::with_capacity(pairs.len());
         let mut before = Vec::with_capacity(pairs.len() + 1);
         let mut sum = 0.0;

@@ -22,7 +22,7 @@ def kernel(width):
 
 def weighted_percentiles(values, weights, at):
     there = np.isfinite(values) & (weights > 0)
-    order = np.argsort(values[there], kind="stable")
+    order = np.lexsort((weights[there], values[there]))
     values, weights = values[there][order], weights[there][order]
     middles = np.cumsum(weights) - weights / 2
     return np.interp(middles[0] + (middles[-1] - middles[0]) * np.asarray(at), middles, values)

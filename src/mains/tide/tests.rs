@@ -1,3 +1,5 @@
+//! Made-up days whose forecast is known beforehand.
+
 use super::*;
 use chrono::DateTime;
 

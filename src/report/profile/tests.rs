@@ -1,3 +1,5 @@
+//! A small hall by hand: every figure of its profile can be worked out on paper.
+
 use super::*;
 use crate::alarm::CONDITIONS;
 use crate::config::Surroundings;
@@ -204,10 +206,46 @@ fn the_json_holds_what_programs_were_promised() {
 fn people_read_the_day_the_rail_and_the_turns() {
     insta::assert_snapshot!(text(&evening()), @r#"
     Mains by time of day, Tue 1 Dec 18:00 to Tue 1 Dec 18:30 (Europe/Berlin), V: mean and the band of 5 to 95 % of the 10-minute values
+
+    hour   working days             weekends
+    00:00  -                        -
+    01:00  -                        -
+    02:00  -                        -
+    03:00  -                        -
+    04:00  -                        -
+    05:00  -                        -
+    06:00  -                        -
+    07:00  -                        -
+    08:00  -                        -
+    09:00  -                        -
+    10:00  -                        -
+    11:00  -                        -
+    12:00  -                        -
+    13:00  -                        -
+    14:00  -                        -
+    15:00  -                        -
+    16:00  -                        -
+    17:00  -                        -
+    18:00  235.0  (233.2 to 236.8)  -
+    19:00  -                        -
+    20:00  -                        -
+    21:00  -                        -
+    22:00  -                        -
+    23:00  -                        -
+
+    The highest quarter hours of the last seven days:
       Tue 1 Dec 18:15  236.5 V
       Tue 1 Dec 18:00  234.5 V
+
+    Rail reservoir of hall (idle) would stand highest at about 18:20: 487 V, 5 to 95 % 487 to 487 V, each ± 11 V.
+      above its limit of 480 V: 66.7 % of the recorded time; above its setpoint of 469 V: 100.0 %
+      longest on 2026-12-01: 0.3 h above the limit
+
     Tide table as of Tue 1 Dec 18:30
       high  Tue 1 Dec 18:40  mains 238.5 V (236.5 to 241.5 V)
+            hall.reservoir idle would stand at 490 V (486 to 496 V, each ± 12 V)
+      Bands: nine of ten 10-minute values are expected within them; seconds go further.
+    railtide warns; it is no protective device. Do not rely on it to keep an amplifier or a person safe.
     "#);
 }
 
@@ -216,7 +254,9 @@ fn with_nothing_recorded_and_too_little_for_a_table_it_says_so() {
     let empty = profile(&[], &Err(NoForecast::TooShort { rows: 2 }));
     insta::assert_snapshot!(text(&empty), @r#"
     No mains is recorded between Tue 1 Dec 18:00 and Tue 1 Dec 18:30; choose another stretch, or look whether the logger is running.
+
     Tide table as of Tue 1 Dec 18:30
+      None: the tide table needs 7 days of 24 hours that are at least half recorded, and there are 2; it comes by itself when they are there.
     "#);
     assert_eq!(empty.tide.len(), 0);
 }
