@@ -5,10 +5,10 @@ use super::svg::Pen;
 use crate::mains::Slot;
 
 const WIDTH: f64 = 560.0;
-const HEIGHT: f64 = 230.0;
+const HEIGHT: f64 = 246.0;
 const LEFT: f64 = 44.0;
 const RIGHT: f64 = 14.0;
-const TOP: f64 = 30.0;
+const TOP: f64 = 46.0;
 const BOTTOM: f64 = 24.0;
 
 /// Working days as a line with its 5–95 % band, weekends as a dashed line.
@@ -44,7 +44,7 @@ pub fn day_band_svg(id: &str, title: &str, working: &[Slot], weekend: &[Slot]) -
         pen.line("grid", (LEFT, y.at(volts)), (WIDTH - RIGHT, y.at(volts)));
         pen.text("", (LEFT - 5.0, y.at(volts) + 4.0), "end", &tick_text(volts, step));
     }
-    pen.text("soft", (4.0, TOP - 10.0), "start", "V");
+    pen.text("soft", (LEFT - 5.0, TOP - 4.0), "end", "V");
     let line = |slots: &[Slot], volts: fn(&Slot) -> f64| -> Vec<(f64, f64)> {
         slots.iter().map(|slot| (x.at(f64::from(slot.minute)), y.at(volts(slot)))).collect()
     };
@@ -55,7 +55,7 @@ pub fn day_band_svg(id: &str, title: &str, working: &[Slot], weekend: &[Slot]) -
         pen.line(class, (left, TOP - 8.0), (left + 26.0, TOP - 8.0));
         pen.text("soft", (left + 31.0, TOP - 4.0), "start", name);
     };
-    key(&mut pen, LEFT + 160.0, "line", "working days, band 5–95 %");
-    key(&mut pen, LEFT + 368.0, "second", "weekends");
+    key(&mut pen, LEFT, "line", "working days, band 5–95 %");
+    key(&mut pen, LEFT + 230.0, "second", "weekends");
     pen.end()
 }

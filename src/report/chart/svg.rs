@@ -16,7 +16,7 @@ font:13px system-ui,sans-serif;background:var(--paper);color:var(--ink)}\
 .rt-chart .third{fill:none;stroke:var(--soft);stroke-width:1.6;stroke-dasharray:2 3}\
 .rt-chart .ahead{stroke-dasharray:4 4}.rt-chart .band{fill:var(--band);stroke:none}\
 .rt-chart .limit{stroke:var(--danger);stroke-width:1.6}.rt-chart .setpoint{stroke:var(--danger);stroke-width:1.2;stroke-dasharray:6 4}\
-.rt-chart .limit-name{fill:var(--danger)}.rt-chart .gap{fill:var(--faint);opacity:.35}.rt-chart .dot{fill:var(--ink)}";
+.rt-chart .limit-name{fill:var(--danger);stroke:var(--paper);stroke-width:3;paint-order:stroke}.rt-chart .gap{fill:var(--faint);opacity:.35}.rt-chart .dot{fill:var(--ink)}";
 
 /// A drawing being made.
 #[derive(Debug)]
