@@ -3,7 +3,6 @@
 //! them are computed again here, all by `tests/slow/run reference`.
 
 #[path = "support/peers.rs"]
-#[expect(dead_code, reason = "each test program uses its own part of the bench")]
 mod peers;
 
 use std::process::Command;

@@ -6,7 +6,6 @@
 #![expect(clippy::print_stdout, reason = "a benchmark reports")]
 
 #[path = "../support/peers.rs"]
-#[expect(dead_code, reason = "only Python is needed")]
 mod peers;
 
 use std::hint::black_box;
