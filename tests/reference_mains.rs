@@ -2,7 +2,6 @@
 //! digit, and the tide table against the same method written in numpy.
 
 #[path = "support/peers.rs"]
-#[allow(dead_code, reason = "only Python is needed here")]
 mod peers;
 #[path = "support/recording.rs"]
 mod recording;

@@ -65,7 +65,7 @@ impl RoomFigures {
     const NONE_LEFT: u64 = 20_000_000;
 
     /// Days until the disk is full at the record's own growth. A record that is too young to tell is taken to grow by
-    /// [`RoomFigures::NONE_LEFT`] a day, which two hundred channels at a reading a second would.
+    /// 20 MB a day, which a hundred channels at a reading a second would.
     pub fn days_left(&self) -> f64 {
         let free = self.free_bytes.saturating_sub(Self::NONE_LEFT) as f64;
         free / self.bytes_per_day.unwrap_or(Self::NONE_LEFT as f64).max(1.0)

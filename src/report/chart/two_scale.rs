@@ -109,6 +109,9 @@ impl TwoScale<'_> {
         }
         draw_band(&mut pen, &x, &y, self.expected, "line ahead");
         draw_band(&mut pen, &x, &y, self.recorded, "line");
+        if let Some(rail) = &self.rail {
+            self.limits(&mut pen, &y, rail);
+        }
         if self.recorded.is_empty() && self.expected.is_empty() {
             pen.text("soft", ((LEFT + WIDTH - RIGHT) / 2.0, self.height / 2.0), "middle", "nothing recorded");
         }
@@ -195,6 +198,11 @@ impl TwoScale<'_> {
             pen.text("", (right + 7.0, y.at(mains) + 4.0), "start", &tick_text(volts, step));
         }
         pen.text("soft", (WIDTH - 4.0, TOP - 10.0), "end", &format!("{}, V", rail.name));
+    }
+
+    /// Over the curve, so that neither hides the other.
+    fn limits(&self, pen: &mut Pen, y: &Scale, rail: &RailScale<'_>) {
+        let right = WIDTH - RIGHT;
         let level =
             |volts: f64| rail.curve.mains_for(volts).filter(|mains| y.holds(*mains)).map(|mains| y.at(mains));
         if let Some(setpoint) = rail.setpoint_v.and_then(level) {
