@@ -188,6 +188,7 @@ fn the_json_is_that_of_the_description() {
       "extreme_v": 254.0
     }
   ],
+  "findings": [],
   "instrument": "channel \"mains\", one r.m.s. reading every 1 min, accuracy ±(0.5 % + 0.2 V) by the config"
 }
 "#);

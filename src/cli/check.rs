@@ -5,7 +5,7 @@ use std::path::PathBuf;
 use clap::Args;
 
 use crate::report::{Understood, understood_text};
-use crate::watch::{findings, part_watches, rail_watches};
+use crate::watch::rail_watches;
 
 /// Arguments of `check`.
 #[derive(Debug, Args)]
@@ -16,16 +16,7 @@ impl Check {
         let site = super::site::load(config)?;
         let projections = super::site::projections(&site)?;
         let projectors: Vec<_> = projections.iter().map(|p| p.projector.clone()).collect();
-        let parts = part_watches(&site, &projectors);
-        let findings: Vec<_> = site
-            .amplifiers
-            .iter()
-            .zip(&projectors)
-            .zip(&parts)
-            .map(|((amplifier, projector), parts)| {
-                findings(amplifier, projector.as_ref(), parts, site.declared_v)
-            })
-            .collect();
+        let findings = super::site::findings(&site, &projectors);
         let rails = rail_watches(&site, &projectors);
         let understood =
             Understood { site: &site, projections: &projections, rails: &rails, findings: &findings };

@@ -9,7 +9,8 @@ use crate::alarm::CONDITIONS;
 use crate::config::{Amplifier, Site, Surroundings};
 use crate::store::{Store, StoreError};
 use crate::supply::fit::RecordedFit;
-use crate::watch::{Projecting, RailWatch, projecting, rail_watches, valid_fit};
+use crate::supply::{Finding, Projector};
+use crate::watch::{self, Projecting, RailWatch, part_watches, projecting, rail_watches, valid_fit};
 
 /// Reads the config: the given file, or the first that exists of those that `--help` names.
 pub(super) fn load(given: Option<PathBuf>) -> anyhow::Result<Site> {
@@ -75,6 +76,19 @@ pub(super) fn fit(site: &Site, amplifier: &Amplifier) -> anyhow::Result<Option<R
 pub(super) fn projections(site: &Site) -> anyhow::Result<Vec<Projecting>> {
     let of = |amplifier| Ok(projecting(amplifier, fit(site, amplifier)?.as_ref()));
     site.amplifiers.iter().map(of).collect()
+}
+
+/// What is to be said of each amplifier's supply as it stands.
+pub(super) fn findings(site: &Site, projectors: &[Option<Projector>]) -> Vec<Vec<Finding>> {
+    let parts = part_watches(site, projectors);
+    site.amplifiers
+        .iter()
+        .zip(projectors)
+        .zip(&parts)
+        .map(|((amplifier, projector), parts)| {
+            watch::findings(amplifier, projector.as_ref(), parts, site.declared_v)
+        })
+        .collect()
 }
 
 /// Every limit of the site with its projection.

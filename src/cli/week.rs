@@ -14,6 +14,7 @@ use crate::mains::Sample;
 use crate::reading::ChannelQuantity;
 use crate::report::week::{MainsRecord, Week, week_html, week_text, week_workbook};
 use crate::store::{Store, StoredChannel};
+use crate::watch::rail_watches;
 
 /// Arguments of `week`.
 #[derive(Debug, Args)]
@@ -55,8 +56,11 @@ impl WeekCommand {
             samples: &samples,
             intervals: &intervals,
         };
-        let rails = super::site::rails(&site)?;
-        let week = Week::new(&site, stretch.from, stretch.to, &record, &rails);
+        let projections = super::site::projections(&site)?;
+        let projectors: Vec<_> = projections.into_iter().map(|projecting| projecting.projector).collect();
+        let rails = rail_watches(&site, &projectors);
+        let findings = super::site::findings(&site, &projectors);
+        let week = Week::new(&site, stretch.from, stretch.to, &record, &rails, &findings);
         self.give(&week)
     }
 

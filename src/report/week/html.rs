@@ -128,6 +128,14 @@ fn rails(week: &Week<'_>, out: &mut impl Write) -> fmt::Result {
     for rail in &week.amplifiers {
         writeln!(out, "<p>{}</p>", escape(&rail_sentence(rail)))?;
     }
+    for finding in &week.findings {
+        writeln!(
+            out,
+            "<p><b>The {} as it stands:</b> {}</p>",
+            escape(&finding.amplifier),
+            escape(&finding.text)
+        )?;
+    }
     Ok(())
 }
 

@@ -12,6 +12,7 @@ use chrono_tz::Tz;
 use serde::Serialize;
 
 use super::chart::BandPoint;
+use super::findings::finding_sentence;
 use super::time::LocalTime;
 use crate::config::{Channel, Site};
 use crate::mains::{
@@ -19,7 +20,7 @@ use crate::mains::{
     excursions,
 };
 use crate::quantity::Utc;
-use crate::supply::{Basis, RailCurve};
+use crate::supply::{Basis, Finding, RailCurve};
 use crate::watch::RailWatch;
 
 pub use html::week_html;
@@ -71,6 +72,8 @@ pub struct Week<'a> {
     pub amplifiers: Vec<RailLine>,
     /// Dips, swells and interruptions.
     pub events: Vec<EventLine>,
+    /// What is wrong with a supply as it stands, whatever the mains does.
+    pub findings: Vec<FindingLine>,
     /// What measured it.
     pub instrument: String,
     #[serde(skip)]
@@ -197,6 +200,15 @@ pub struct ExcursionLine {
     pub highest_v: f64,
 }
 
+/// Something wrong with a supply as it stands.
+#[derive(Clone, Debug, PartialEq, Serialize)]
+pub struct FindingLine {
+    /// The amplifier's name.
+    pub amplifier: String,
+    /// One sentence.
+    pub text: String,
+}
+
 /// A dip, swell or interruption, after the method of IEC 61000-4-30 from what was recorded.
 #[derive(Clone, Debug, PartialEq, Serialize)]
 pub struct EventLine {
@@ -211,8 +223,16 @@ pub struct EventLine {
 }
 
 impl<'a> Week<'a> {
-    /// What `record` says of the time from `from` until before `to`.
-    pub fn new(site: &'a Site, from: Utc, to: Utc, record: &MainsRecord<'a>, rails: &[RailWatch]) -> Self {
+    /// What `record` says of the time from `from` until before `to`. `findings` holds those of each amplifier, in the
+    /// config's order.
+    pub fn new(
+        site: &'a Site,
+        from: Utc,
+        to: Utc,
+        record: &MainsRecord<'a>,
+        rails: &[RailWatch],
+        findings: &[Vec<Finding>],
+    ) -> Self {
         let local = |at| LocalTime::of(at, site.time_zone);
         let valid = || record.intervals.iter().filter(|i| !i.flagged);
         let distribution = Distribution::new(valid().map(|i| i.rms_v));
@@ -261,6 +281,17 @@ impl<'a> Week<'a> {
                 .collect(),
             amplifiers,
             events: found.iter().map(|event| event_line(event, site.time_zone)).collect(),
+            findings: site
+                .amplifiers
+                .iter()
+                .zip(findings)
+                .flat_map(|(amplifier, found)| found.iter().map(move |finding| (amplifier, finding)))
+                .filter(|(_, finding)| finding.is_wrong())
+                .map(|(amplifier, finding)| FindingLine {
+                    amplifier: amplifier.name.clone(),
+                    text: finding_sentence(finding),
+                })
+                .collect(),
             instrument: instrument(record),
             points: record.intervals.iter().map(BandPoint::from).collect(),
             all_intervals: record.intervals,

@@ -122,6 +122,9 @@ fn rails(week: &Week<'_>, out: &mut impl Write) -> fmt::Result {
         }
         more(rail.excursions.len(), out)?;
     }
+    for finding in &week.findings {
+        writeln!(out, "\nThe {} as it stands: {}", finding.amplifier, finding.text)?;
+    }
     Ok(())
 }
 
