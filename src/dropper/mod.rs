@@ -1,0 +1,16 @@
+//! What brings a rail down: preferred values, zeners, the MOSFET and its gate, bucking windings, heat, and the supply
+//! solved again with each way of doing it.
+//!
+//! Pure: no clock, no file, no socket.
+
+mod bucking;
+mod e_series;
+mod heat;
+mod mosfet;
+mod zener;
+
+pub use bucking::{Bucking, STANDARD_SECONDARIES_V};
+pub use e_series::{ESeries, Fit};
+pub use heat::{HeatPath, PULSED_TYPICAL, pulsed_resistor_w, rated_power_w};
+pub use mosfet::{GateBias, Square, VGS_UNKNOWN_V};
+pub use zener::{Zener, ZenerString};
