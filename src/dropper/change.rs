@@ -111,7 +111,7 @@ impl Change {
                         return Err(Unfit::MovesBias);
                     }
                 }
-                changed.dropper = Some(*dropper);
+                changed.dropper = Some(dropper.clone());
             }
             Change::Rectifier(device) => {
                 if !matches!(circuit.device, Device::Valve { .. }) {
