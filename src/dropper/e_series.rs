@@ -51,7 +51,7 @@ impl ESeries {
         // A value that was itself computed from preferred ones must not miss its own by the last bit.
         let slack = 1e-9;
         match fit {
-            Fit::Below => values.filter(|v| *v <= wanted * (1.0 + slack)).last(),
+            Fit::Below => values.filter(|v| *v <= wanted * (1.0 + slack)).next_back(),
             Fit::Above => values.into_iter().find(|v| *v >= wanted * (1.0 - slack)),
             Fit::Nearest => values.min_by(|a, b| (a / wanted).ln().abs().total_cmp(&(b / wanted).ln().abs())),
         }

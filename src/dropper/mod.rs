@@ -9,6 +9,7 @@ mod e_series;
 mod heat;
 mod mosfet;
 mod outcome;
+mod propose;
 #[cfg(test)]
 mod tests;
 mod zener;
@@ -19,4 +20,5 @@ pub use e_series::{ESeries, Fit};
 pub use heat::{HeatPath, PULSED_TYPICAL, pulsed_resistor_w, rated_power_w};
 pub use mosfet::{GateBias, Square, VGS_UNKNOWN_V};
 pub use outcome::{Bound, Outcome};
+pub use propose::{Proposal, Task};
 pub use zener::{Zener, ZenerString};

@@ -127,3 +127,78 @@ fn what_does_not_fit_is_refused_with_its_reason() {
     let fitted = zener(40.0).apply(&plain, true).unwrap();
     assert_eq!(zener(10.0).apply(&fitted, true), Err(Unfit::DropperFitted));
 }
+
+/// What is proposed for `circuit` under `bounds`, best first, each with whether it keeps them.
+fn proposed(circuit: &Circuit, bounds: &[Bound], bias_stays: bool) -> Vec<(Way, bool)> {
+    let mains = Distribution::new(mains());
+    let task = Task { circuit, bounds, mains: &mains, declared_v: 230.0, bias_stays };
+    task.proposals().unwrap().into_iter().map(|p| (p.way, p.meets)).collect()
+}
+
+#[test]
+fn ways_are_ranked_by_reach_and_a_tap_comes_first() {
+    let circuit = bridge(0.15);
+    let without_tap = {
+        let mut circuit = circuit.clone();
+        circuit.transformer.taps_v = vec![230.0];
+        circuit.heater = None;
+        circuit.transformer.wound_for_hz = 45.0;
+        circuit
+    };
+    let all = proposed(&circuit, &[bound(475.0)], true);
+    assert_eq!(all[0], (Way::Tap, true), "{all:?}");
+    assert_eq!(all.len(), 5);
+    let all = proposed(&without_tap, &[bound(475.0)], true);
+    assert_eq!(all[0], (Way::ReturnMosfet, true), "the core has room, so the return comes first: {all:?}");
+    // The heaters stand at 253/230 of 6.3 V, 10.0 %, and the core 10 % over: the primary side comes first.
+    let no_room = Circuit {
+        transformer: Transformer { wound_for_hz: 50.0, ..without_tap.transformer.clone() },
+        ..without_tap
+    };
+    let all = proposed(&no_room, &[bound(475.0)], true);
+    assert_eq!(all[0], (Way::Bucking, true), "{all:?}");
+}
+
+#[test]
+fn no_return_part_is_proposed_where_it_would_move_the_bias() {
+    let all = proposed(&bridge(0.15), &[bound(475.0)], false);
+    let ways: Vec<Way> = all.iter().map(|p| p.0).collect();
+    assert_eq!(ways, [Way::Tap, Way::Bucking]);
+}
+
+#[test]
+fn a_bound_that_starves_at_the_low_end_is_met_by_none() {
+    let narrow = Bound { min_v: Some(449.0), ..bound(450.0) };
+    let all = proposed(&bridge(0.15), &[narrow], true);
+    assert!(!all.is_empty() && all.iter().all(|(_, meets)| !meets), "{all:?}");
+}
+
+#[test]
+fn a_rail_within_its_bounds_needs_nothing_and_nothing_is_said_of_no_mains() {
+    let circuit = bridge(0.15);
+    let recorded = Distribution::new(mains());
+    let nothing = Distribution::new([]);
+    let task = |mains, bounds| Task { circuit: &circuit, bounds, mains, declared_v: 230.0, bias_stays: true };
+    let (high, low) = ([bound(600.0)], [bound(475.0)]);
+    assert!(task(&recorded, &high).none_needed().unwrap());
+    assert!(!task(&recorded, &low).none_needed().unwrap());
+    assert!(!task(&nothing, &high).none_needed().unwrap());
+    assert!(task(&nothing, &low).proposals().unwrap().is_empty());
+}
+
+#[test]
+fn a_proposal_keeps_its_bound_at_both_ends_of_its_tolerance() {
+    let circuit = bridge(0.15);
+    let recorded = Distribution::new(mains());
+    let bounds = [bound(475.0)];
+    let task =
+        Task { circuit: &circuit, bounds: &bounds, mains: &recorded, declared_v: 230.0, bias_stays: true };
+    let met: Vec<Proposal> = task.proposals().unwrap().into_iter().filter(|p| p.meets).collect();
+    assert!(met.len() >= 3);
+    for proposal in met {
+        let (weak, strong) = (&proposal.at_weakest[0], &proposal.at_strongest[0]);
+        assert!(weak.rail_v(253.0) <= 475.0 + 1e-6, "{:?}", proposal.weakest);
+        assert!(strong.rail_v(225.0) >= 400.0 - 1e-6, "{:?}", proposal.strongest);
+        assert!(strong.rail_v(253.0) <= weak.rail_v(253.0) + 1e-6);
+    }
+}
