@@ -46,13 +46,13 @@ impl ESeries {
             return None;
         }
         let power = wanted.log10().floor() as i32;
-        let values = (power - 1..=power + 1)
+        let mut values = (power - 1..=power + 1)
             .flat_map(|decade| self.decade().into_iter().map(move |v| scaled(v, decade)));
         // A value that was itself computed from preferred ones must not miss its own by the last bit.
         let slack = 1e-9;
         match fit {
-            Fit::Below => values.filter(|v| *v <= wanted * (1.0 + slack)).next_back(),
-            Fit::Above => values.into_iter().find(|v| *v >= wanted * (1.0 - slack)),
+            Fit::Below => values.rfind(|v| *v <= wanted * (1.0 + slack)),
+            Fit::Above => values.find(|v| *v >= wanted * (1.0 - slack)),
             Fit::Nearest => values.min_by(|a, b| (a / wanted).ln().abs().total_cmp(&(b / wanted).ln().abs())),
         }
     }

@@ -9,6 +9,12 @@ use super::zener::ZenerString;
 use crate::mains::Distribution;
 use crate::supply::{CORE_LIMIT, Circuit, Dropper, SolveError, SolveOptions, core_ratio};
 
+/// How much warmer than 25 °C a zener at the gate gets inside a chassis, K. Our judgement, no source.
+const GATE_ZENER_RISE_K: f64 = 50.0;
+
+/// The same for a power zener that carries the whole current. Our judgement, no source.
+const POWER_ZENER_RISE_K: f64 = 100.0;
+
 /// What is to be brought down, and over which mains.
 #[derive(Clone, Debug)]
 pub struct Task<'a> {
@@ -159,7 +165,7 @@ fn zener_drop(volts: f64) -> Change {
 
 fn zeners() -> Vec<Candidate> {
     let of = |string: ZenerString| {
-        let (low, high) = string.limits_v();
+        let (low, high) = string.range_v(POWER_ZENER_RISE_K);
         Candidate { weakest: zener_drop(low), strongest: zener_drop(high), zeners: Some(string) }
     };
     strings().into_iter().map(of).collect()
@@ -171,7 +177,7 @@ fn mosfets() -> Vec<Candidate> {
         Change::Dropper(Dropper::ReturnMosfet { zener_v, threshold_v, k_a_per_v2: 1e3, half_width_v: 0.0 })
     };
     let of = |string: ZenerString| {
-        let (low, high) = string.limits_v();
+        let (low, high) = string.range_v(GATE_ZENER_RISE_K);
         Candidate {
             weakest: drop(low, VGS_UNKNOWN_V.0),
             strongest: drop(high, VGS_UNKNOWN_V.1),

@@ -109,6 +109,12 @@ impl ZenerString {
         let (low, high) = self.zener.limits_v();
         (low * f64::from(self.count), high * f64::from(self.count))
     }
+
+    /// Lowest cold and highest `rise_k` warmer, V. Below 6.8 V, where the sign is unknown, the limits alone.
+    pub fn range_v(&self, rise_k: f64) -> (f64, f64) {
+        let (low, high) = self.limits_v();
+        (low, high + f64::from(self.count) * self.zener.drift_v(rise_k).unwrap_or(0.0).max(0.0))
+    }
 }
 
 #[cfg(test)]
@@ -136,6 +142,9 @@ mod tests {
         let two = ZenerString { zener: Zener { nominal_v: 18.0 }, count: 2 };
         let (low, high) = two.limits_v();
         assert!((low - 33.6).abs() < 1e-9 && (high - 38.2).abs() < 1e-9, "{low} {high}");
+        // 0.085 %/K of 18 V (the same sheet) over 50 K, twice.
+        let (cold, warm) = two.range_v(50.0);
+        assert!((cold - 33.6).abs() < 1e-9 && (warm - 38.2 - 1.53).abs() < 1e-9, "{cold} {warm}");
     }
 
     #[test]
