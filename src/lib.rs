@@ -20,6 +20,7 @@
 //! | [`supply`] | from mains to every rail | yes |
 //! | [`mains`] | what readings say about the mains: intervals, events, rules, the day, the tide table | yes |
 //! | [`alarm`] | the alarm's state machine and the table of conditions | yes |
+//! | [`dropper`] | what brings a rail down: parts, heat, and the changed supply solved again | yes |
 //! | [`config`] | the TOML file into checked types | yes |
 //! | [`watch`] | one site's live state: readings in, decided alarms and notices out | yes |
 //! | [`report`] | one way to say each result, as text and as JSON | yes |
@@ -35,6 +36,7 @@ pub mod cli;
 pub mod clock;
 pub mod config;
 pub mod daemon;
+pub mod dropper;
 pub mod logger;
 pub mod mains;
 pub mod notice;
