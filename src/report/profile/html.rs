@@ -12,7 +12,7 @@ const STYLE: &str = "\
 @media(prefers-color-scheme:dark){:root{--paper:#211d18;--ink:#efe6d6;--soft:#b5a88f;--faint:#4a4235}}\
 @media print{:root{--paper:#fff;--ink:#000;--soft:#444;--faint:#ccc}@page{size:A4;margin:14mm}}\
 body{margin:0 auto;max-width:44rem;padding:1rem;background:var(--paper);color:var(--ink);\
-font:16px/1.45 system-ui,sans-serif}h2{break-after:avoid}td{white-space:nowrap}h2{break-after:avoid}td{white-space:nowrap}h1{font-size:1.4rem}h2{font-size:1.1rem;margin:1.4rem 0 .4rem}\
+font:16px/1.45 system-ui,sans-serif}h2{break-after:avoid}td{white-space:nowrap}td:last-child{white-space:normal}h1{font-size:1.4rem}h2{font-size:1.1rem;margin:1.4rem 0 .4rem}\
 svg{width:100%;height:auto;display:block}figure{margin:.6rem 0;break-inside:avoid}\
 .wide{overflow-x:auto}table{border-collapse:collapse;font-variant-numeric:tabular-nums}\
 th,td{padding:.2rem .7rem .2rem 0;text-align:left;vertical-align:top;border-bottom:1px solid var(--faint)}\
