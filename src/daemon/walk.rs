@@ -429,6 +429,39 @@ webhook = "http://127.0.0.1:9/"
     }
 
     #[tokio::test]
+    async fn what_the_tide_table_expects_is_told_before_it_comes() {
+        let scene = Scene::new();
+        let start = 1_790_000_000_000_i64;
+        let Scene { folder, walk, .. } = scene;
+        let (_, mut store, _) = walk.finish();
+        let channel = store.channels().unwrap()[0].id;
+        // Ten days by the minute: 222 V, and 238 V at its height once a day, next about three hours from now.
+        let minute = |i: i64| {
+            let into_day = (i - 180) as f64 / 1440.0 * std::f64::consts::TAU;
+            let mv = 230_000.0 + 8_000.0 * into_day.cos() + (i % 7) as f64;
+            crate::reading::Reading {
+                channel,
+                at: Utc(start + i * 60_000),
+                value: crate::quantity::Millivolts(mv as i32),
+                quality: crate::reading::Quality::Good,
+            }
+        };
+        let history = (-14_400..0).map(minute).collect();
+        store.merge_recording(channel, 60_000, history).unwrap();
+        drop(store);
+        let mut scene = Scene::at(HALL, folder, start);
+        let level = |seconds: i64| f64::from(minute(seconds / 60).value.0) / 1000.0;
+        for seconds in (0..1500).step_by(10) {
+            scene.mains(level(seconds) - 4.5, 10);
+        }
+        let ahead = "SELECT count(*) FROM journal WHERE condition = 'rail-ahead' AND to_state = 'unacknowledged'";
+        assert_eq!(scene.number(ahead), 1);
+        let outbox = scene.outbox();
+        let notice = &outbox.iter().find(|entry| entry.notice.key.condition == "rail-ahead").unwrap().notice;
+        assert!(notice.facts.note.contains("expected from about"), "{:?}", notice.facts);
+    }
+
+    #[tokio::test]
     async fn with_no_room_the_notice_is_handed_over_unrecorded_and_all_is_written_when_there_is_room() {
         let mut scene = Scene::new();
         scene.mains(226.0, 10);
