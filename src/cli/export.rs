@@ -339,7 +339,7 @@ fn chosen(store: &Store, names: &[String]) -> anyhow::Result<Vec<StoredChannel>>
 }
 
 /// A progress bar on standard error where that is a terminal; counting the whole is only worth while for one.
-pub(super) fn bar(total: impl FnOnce() -> anyhow::Result<u64>) -> anyhow::Result<ProgressBar> {
+fn bar(total: impl FnOnce() -> anyhow::Result<u64>) -> anyhow::Result<ProgressBar> {
     if !io::stderr().is_terminal() {
         return Ok(ProgressBar::hidden());
     }

@@ -2,15 +2,15 @@
 
 use std::collections::BTreeMap;
 use std::fs::File;
-use std::io::{self, BufRead, BufReader};
+use std::io::{self, BufRead, BufReader, IsTerminal};
 use std::path::{Path, PathBuf};
 use std::time::Duration;
 
 use anyhow::{Context, anyhow, bail};
 use chrono_tz::Tz;
 use clap::{Args, ValueEnum};
+use indicatif::{ProgressBar, ProgressStyle};
 
-use super::export::bar;
 use crate::config::Site;
 use crate::logger::recording::{
     Column, Layout, Recording, RowFault, TimeColumns, TimeFormat, guess_separator,
@@ -134,7 +134,7 @@ impl Import {
         }
         let (mut store, _lock) = open_for_import(&site)?;
         let channel = self.channel_id(&site, &mut store)?;
-        let bar = bar(|| Ok(0))?;
+        let bar = counter()?;
         let mut rows = first;
         while !rows.is_empty() {
             let readings = self.readings(&site, channel, period, &rows, &mut tally);
@@ -312,6 +312,15 @@ fn faults_text(tally: &Tally) -> String {
         text += &format!("{count} {rows} left out: {fault} (line {}{more}).\n", named.join(", "));
     }
     text
+}
+
+/// How far it has come, on standard error where that is a terminal; the whole isn't known beforehand.
+fn counter() -> anyhow::Result<ProgressBar> {
+    if !io::stderr().is_terminal() {
+        return Ok(ProgressBar::hidden());
+    }
+    let style = ProgressStyle::with_template("{spinner} {human_pos} readings, {per_sec}")?;
+    Ok(ProgressBar::new_spinner().with_style(style))
 }
 
 /// Up to `most` good rows; the bad ones are counted.

@@ -454,7 +454,8 @@ webhook = "http://127.0.0.1:9/"
         for seconds in (0..1500).step_by(10) {
             scene.mains(level(seconds) - 4.5, 10);
         }
-        let ahead = "SELECT count(*) FROM journal WHERE condition = 'rail-ahead' AND to_state = 'unacknowledged'";
+        let ahead =
+            "SELECT count(*) FROM journal WHERE condition = 'rail-ahead' AND to_state = 'unacknowledged'";
         assert_eq!(scene.number(ahead), 1);
         let outbox = scene.outbox();
         let notice = &outbox.iter().find(|entry| entry.notice.key.condition == "rail-ahead").unwrap().notice;
