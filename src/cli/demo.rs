@@ -17,7 +17,7 @@ use crate::daemon;
 use crate::logger::simulated::{Hall, LiveHall, SimulatedLogger};
 use crate::quantity::{Millivolts, Uncertain, Utc};
 use crate::reading::{Quality, Reading};
-use crate::store::{Batch, ChannelSpec, OpenOptions, Store};
+use crate::store::{ChannelSpec, OpenOptions, Store};
 
 use phone::{Call, Phone};
 
@@ -183,17 +183,20 @@ fn write_history(site: &Site, hall: &Hall, now: Utc) -> anyhow::Result<usize> {
     let first_s = (now - HISTORY).0 / 1000;
     let last_s = now.0 / 1000 - 1;
     let mut count = 0;
-    let mut batch = Batch::default();
-    for s in first_s..=last_s {
-        let at = Utc(s * 1000);
-        let state = hall.at(at);
-        for (channel, volts) in ids.iter().zip([state.mains_v, state.rail_v]) {
-            let Some(value) = Millivolts::from_volts(volts) else { continue };
-            batch.readings.push(Reading { channel: *channel, at, value, quality: Quality::Good });
+    // A day at a time, as an import brings it: each reading stands for its own second, whatever the live logger's pace.
+    for start_s in (first_s..=last_s).step_by(86_400) {
+        let mut of_day = vec![Vec::new(); ids.len()];
+        for s in start_s..=last_s.min(start_s + 86_399) {
+            let at = Utc(s * 1000);
+            let state = hall.at(at);
+            for (i, volts) in [state.mains_v, state.rail_v].into_iter().enumerate() {
+                let Some(value) = Millivolts::from_volts(volts) else { continue };
+                of_day[i].push(Reading { channel: ids[i], at, value, quality: Quality::Good });
+            }
         }
-        if s % 3_600 == 0 || s == last_s {
-            count += batch.readings.len();
-            store.commit(&std::mem::take(&mut batch))?;
+        for (channel, readings) in ids.iter().zip(of_day) {
+            count += readings.len();
+            store.merge_recording(*channel, 1000, readings)?;
         }
     }
     Ok(count)
@@ -272,7 +275,9 @@ fn look_further(config: &Path) -> anyhow::Result<()> {
          {program} now --config {config}\n  \
          {program} alarm --config {config}\n  \
          {program} alarm ack rail-high --config {config}\n  \
-         {program} check --config {config}\n\
+         {program} check --config {config}\n  \
+         {program} week --last \"7 days\" --config {config}\n  \
+         {program} profile --config {config}\n\
          With a real logger: README.md, \"The first night with a real logger\".\n"
     ))
 }
