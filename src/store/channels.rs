@@ -134,3 +134,12 @@ fn stored(row: &Row<'_>) -> rusqlite::Result<StoredChannel> {
         node: row.get(5)?,
     })
 }
+
+/// How long one live reading of `channel` stands for, ms.
+pub(super) fn live_period(conn: &Connection, channel: ChannelId) -> rusqlite::Result<u32> {
+    let period = conn
+        .prepare_cached("SELECT sample_period_ms FROM channel WHERE id = ?1")?
+        .query_row([channel.0], |row| row.get(0))
+        .optional()?;
+    Ok(period.unwrap_or(1000))
+}

@@ -6,15 +6,6 @@ use rusqlite::Connection;
 use rusqlite::backup::Backup;
 
 use super::error::StoreError;
-use super::open::Store;
-
-impl Store {
-    /// Copies the whole record into a new file at `target` by SQLite's online backup, as it is at one moment. The
-    /// daemon may go on writing meanwhile.
-    pub fn copy_to(&self, target: &Path) -> Result<(), StoreError> {
-        copy(&self.conn, target)
-    }
-}
 
 /// All pages in one step: the read transaction of a write-ahead log holds up no writer, and a copy in steps would begin
 /// anew at every commit of another process.

@@ -1,10 +1,11 @@
 //! Hours: the open rows of an hour packed into one block a channel, late rows merged into a block that is there
 //! already, and old hours let go.
 
-use rusqlite::{Connection, OptionalExtension, TransactionBehavior, params};
+use rusqlite::{Connection, TransactionBehavior, params};
 
 use super::batch::{FROZEN_BEFORE, number, put_number};
 use super::block::{Block, HOUR_MS, hour_of};
+use super::channels::live_period;
 use super::error::StoreError;
 use super::intervals::refresh_intervals;
 use super::open::Store;
@@ -152,15 +153,6 @@ fn count_differing(tx: &Connection, held: &[Reading], late: &[Reading]) -> rusql
         put_number(tx, key, number(tx, key)?.unwrap_or(0) + differing as i64)?;
     }
     Ok(())
-}
-
-/// How long one live reading of `channel` stands for, ms.
-pub(super) fn live_period(conn: &Connection, channel: ChannelId) -> rusqlite::Result<u32> {
-    let period = conn
-        .prepare_cached("SELECT sample_period_ms FROM channel WHERE id = ?1")?
-        .query_row([channel.0], |row| row.get(0))
-        .optional()?;
-    Ok(period.unwrap_or(1000))
 }
 
 fn drop_hours(conn: &mut Connection, before: Utc) -> rusqlite::Result<bool> {

@@ -6,9 +6,9 @@ use std::time::Duration;
 use rusqlite::{Connection, Row, params};
 
 use super::block::{Block, HOUR_MS, hour_of};
+use super::channels::live_period;
 use super::columns::{from_key, key};
 use super::error::StoreError;
-use super::hours::live_period;
 use super::open::Store;
 use super::readings::{merge, open_rows};
 use crate::mains::{Aggregator, INTERVAL, Interval};

@@ -7,6 +7,7 @@ use std::time::Duration;
 use rusqlite::{Connection, MAIN_DB, OpenFlags};
 use rusqlite_migration::M;
 
+use super::copy::copy;
 use super::error::StoreError;
 use super::schema;
 use crate::quantity::Utc;
@@ -95,6 +96,12 @@ impl Store {
         let store = Store { conn, path: path.into(), seen_version: Cell::new(0), close_from: Utc(0) };
         store.changed_by_others()?;
         Ok(store)
+    }
+
+    /// Copies the whole record into a new file at `target` by SQLite's online backup, as it is at one moment. The
+    /// daemon may go on writing meanwhile.
+    pub fn copy_to(&self, target: &Path) -> Result<(), StoreError> {
+        copy(&self.conn, target)
     }
 
     /// The database file.

@@ -87,7 +87,7 @@ impl Store {
                 )?;
             match closed {
                 Some(period) => Ok(period),
-                None => super::hours::live_period(&self.conn, channel),
+                None => super::channels::live_period(&self.conn, channel),
             }
         };
         shortest().map(|ms| std::time::Duration::from_millis(u64::from(ms))).map_err(|e| self.fault(e))
