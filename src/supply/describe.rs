@@ -5,7 +5,7 @@ use super::measures::{Measures, PathMeasure};
 use super::options::Warm;
 use super::shooting::Periodic;
 use super::solver::Solver;
-use super::steady::{DropperState, NodeState, PowerBalance, SteadyState, Work};
+use super::state::{DropperState, NodeState, PowerBalance, SteadyState, Work};
 
 impl Solver<'_> {
     pub(super) fn heater_v(&self, mains_v: f64) -> Option<f64> {

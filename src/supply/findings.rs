@@ -7,7 +7,7 @@ use serde::Serialize;
 
 use super::circuit::{Circuit, Loading, RectifierCircuit, SeriesPart};
 use super::discharge::{Discharge, discharge, drains};
-use super::steady::SteadyState;
+use super::state::SteadyState;
 
 /// A core that is driven this much over what it was wound for runs hot and hums (rule of this tool; no published
 /// source). No dropper in the rail helps it: a tap or a bucking winding does.

@@ -27,6 +27,7 @@ mod rest;
 mod shooting;
 mod solver;
 mod stage;
+mod state;
 mod steady;
 mod tangent;
 #[cfg(test)]
@@ -43,7 +44,8 @@ pub use findings::{CORE_LIMIT, Finding, RectifierSheet, circuit_findings, core_r
 pub use options::{SolveError, SolveOptions, Warm};
 pub use projection::Grid;
 pub use solver::Solver;
-pub use steady::{DropperState, NodeState, PowerBalance, SteadyState, Work, steady_state, sweep};
+pub use state::{DropperState, NodeState, PowerBalance, SteadyState, Work};
+pub use steady::{steady_state, sweep};
 
 use crate::quantity::Uncertain;
 

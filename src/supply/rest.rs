@@ -2,7 +2,7 @@
 
 use super::circuit::RectifierCircuit;
 use super::solver::Solver;
-use super::steady::{DropperState, NodeState, PowerBalance, SteadyState, Work};
+use super::state::{DropperState, NodeState, PowerBalance, SteadyState, Work};
 
 impl Solver<'_> {
     /// Volts at the first node with no current at all: the peak less the knees of devices and dropper; a doubler's two

@@ -7,7 +7,7 @@ use super::network::Network;
 use super::options::{SolveError, SolveOptions, Warm};
 use super::period::{Drive, Walker};
 use super::shooting::{Goal, NoPeriod, Periodic, shoot};
-use super::steady::{SteadyState, Work};
+use super::state::{SteadyState, Work};
 
 /// How closely the first, rough solution is taken before the mesh is fitted to it.
 const ROUGH: f64 = 1e-4;
