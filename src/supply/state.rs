@@ -98,7 +98,7 @@ pub struct SteadyState {
     pub power: PowerBalance,
     /// Crest factor of the mains it was solved for.
     pub crest_factor: f64,
-    /// Residual at the fixed point, relative: see [`SolveOptions::residual`].
+    /// Residual at the fixed point, relative: see [`super::SolveOptions::residual`].
     pub residual: f64,
     /// Work it took.
     pub work: Work,
